@@ -1,0 +1,23 @@
+"""Spellcurve's validator: proves that the figures of the Spellcurve dbt package are right."""
+
+from spellcurve.compare import Comparison, Disagreement, compare_curves
+from spellcurve.exact import CurveRow, Spell, group_spells, survival_curve, survival_curves
+from spellcurve.provenance import Provenance, ProvenanceError, find_provenance, first_provenance
+
+__version__ = "0.1.0"
+
+__all__ = [
+    "Comparison",
+    "CurveRow",
+    "Disagreement",
+    "Provenance",
+    "ProvenanceError",
+    "Spell",
+    "__version__",
+    "compare_curves",
+    "find_provenance",
+    "first_provenance",
+    "group_spells",
+    "survival_curve",
+    "survival_curves",
+]
