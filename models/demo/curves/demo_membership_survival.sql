@@ -1,0 +1,1 @@
+{{ spellcurve.survival_curve(ref('demo_membership_spells')) }}

@@ -1,0 +1,1 @@
+{{ spellcurve.survival_curve(ref('demo_roll_spells'), interval_scale='log') }}
