@@ -1,0 +1,1 @@
+{{ spellcurve.survival_curve(ref('membership_spells'), by=['plan']) }}
