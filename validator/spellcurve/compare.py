@@ -12,7 +12,7 @@ from typing import Any
 from spellcurve.exact import BOUNDS, COUNTS, FIGURES, CurveRow
 
 TOLERANCE = 1e-9
-#: A bound close to 0 is a difference of two larger numbers, and its leading digits are lost in double precision.
+#: A bound close to 0 is a difference of two larger numbers, and double precision loses its leading digits.
 #: Bounds that are this close to what is expected agree, whatever their ratio.
 BOUND_ALLOWANCE = 1e-12
 

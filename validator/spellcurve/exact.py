@@ -1,8 +1,8 @@
 """The survival curve in exact rational arithmetic: slow, obvious, and the measure of every other one.
 
 Counts, hazards, survival, the cumulative hazard and both variances are ``fractions.Fraction``. Only what
-needs a root, a logarithm or a normal quantile leaves the rationals: it is worked out with 60 decimal digits and
-rounded to a float at the very end.
+needs a root, a logarithm or a normal quantile leaves the rationals: it is worked out with 60 decimal digits
+and rounded to a float at the very end.
 
 Sources: Kaplan and Meier 1958 (survival); Greenwood 1926 (its variance); Nelson 1972 and Aalen 1978
 (cumulative hazard); Borgan and Liestøl 1990 (interval scales).

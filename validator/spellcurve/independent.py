@@ -3,16 +3,16 @@
 What lifelines vouches for (see ``IndependentCurve.columns``):
 
 - at_risk, events, censored and hazard: from its event table. That table counts the spells that enter at t as
-  at risk at t, though its curve does not; they are taken off again here, except at 0, where those with entry 0
-  are at risk.
+  at risk at t, though its curve does not; they are taken off again here, except at 0, where those with entry
+  0 are at risk.
 - survival: its product-limit curve, which already leaves out those who enter at t.
 - survival_lower, survival_upper: on the log-log scale alone, the only one it computes.
 - cumulative_hazard: its Nelson-Aalen sum, with ties taken together (no smoothing).
 
-What it does not vouch for, left None: std_error (it keeps that figure to itself), bounds on other scales, and
-cumulative_hazard_std_error (it uses the binomial variance d (n - d) / n³ where ours is d / n²). Where survival
-falls to 0 while later spells are still to enter, it refuses to fit a curve: then it vouches for the counts and
-the cumulative hazard alone.
+What it does not vouch for, left None: std_error (it keeps that figure to itself), bounds on other scales,
+and cumulative_hazard_std_error (it uses the binomial variance d (n - d) / n³ where ours is d / n²). Where
+survival falls to 0 while later spells are still to enter, it refuses to fit a curve: then it vouches for the
+counts and the cumulative hazard alone.
 
 Spells with entry = duration > 0, which were never at risk, are dropped before it sees them: it would count
 them.

@@ -84,6 +84,6 @@ def _read(text: str, where: str, sql: str, start: int) -> Provenance:
 def _unreadable(where: str, sql: str, start: int, why: str) -> str:
     line = sql.count("\n", 0, start) + 1
     return (
-        f"The Spellcurve comment on line {line} of {where} cannot be read: {why}; compile the model again with "
-        "an unchanged package of the validator's version."
+        f"The Spellcurve comment on line {line} of {where} cannot be read: {why}; compile the model "
+        "again with an unchanged package of the validator's version."
     )
