@@ -1,0 +1,40 @@
+{#
+    Arithmetic on moments. The warehouses' own week, month and hour differences disagree (some count the boundaries crossed,
+    some round up), so only days and microseconds are asked of them, and the other units are built from those.
+#}
+
+{# Calendar days from one moment's date to the other's. #}
+{% macro _days_between(earlier, later) %}
+    {{ return(adapter.dispatch('_days_between', 'spellcurve')(earlier, later)) }}
+{% endmacro %}
+
+{% macro default___days_between(earlier, later) %}
+    {{ return('(cast(' ~ later ~ ' as date) - cast(' ~ earlier ~ ' as date))') }}
+{% endmacro %}
+
+{% macro spark___days_between(earlier, later) %}
+    {{ return('datediff(cast(' ~ later ~ ' as date), cast(' ~ earlier ~ ' as date))') }}
+{% endmacro %}
+
+
+{% macro _microseconds_between(earlier, later) %}
+    {{ return(adapter.dispatch('_microseconds_between', 'spellcurve')(earlier, later)) }}
+{% endmacro %}
+
+{% macro default___microseconds_between(earlier, later) %}
+    {{ return('cast(extract(epoch from (' ~ later ~ ' - ' ~ earlier ~ ')) * 1000000 as bigint)') }}
+{% endmacro %}
+
+{% macro duckdb___microseconds_between(earlier, later) %}
+    {{ return('(epoch_us(' ~ later ~ ') - epoch_us(' ~ earlier ~ '))') }}
+{% endmacro %}
+
+
+{# A moment moved by a number of days, hours or minutes that is known when the model compiles. #}
+{% macro _moment_plus(moment, amount, unit) %}
+    {{ return(adapter.dispatch('_moment_plus', 'spellcurve')(moment, amount, unit)) }}
+{% endmacro %}
+
+{% macro default___moment_plus(moment, amount, unit) %}
+    {{ return('(' ~ moment ~ " + interval '" ~ amount ~ ' ' ~ unit ~ "')") }}
+{% endmacro %}

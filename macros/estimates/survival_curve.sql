@@ -1,0 +1,162 @@
+{% macro survival_curve(
+    spells, by=[], confidence=0.95, interval_scale='log-log', horizon=none, grid='steps', minimum_at_risk=0, small_counts='keep',
+    weights='whole'
+) %}
+    {%- do spellcurve._check_call(
+        'survival_curve',
+        {'spells': spells},
+        ['spells', 'by', 'confidence', 'interval_scale', 'horizon', 'grid', 'minimum_at_risk', 'small_counts', 'weights'],
+        kwargs, varargs
+    ) -%}
+    {{ return(adapter.dispatch('survival_curve', 'spellcurve')(
+        spells, by, confidence, interval_scale, horizon, grid, minimum_at_risk, small_counts, weights
+    )) }}
+{% endmacro %}
+
+
+{% macro _survival_curve_columns() %}
+    {{ return([
+        'duration', 'at_risk', 'events', 'censored', 'hazard', 'survival', 'std_error', 'survival_lower', 'survival_upper',
+        'cumulative_hazard', 'cumulative_hazard_std_error'
+    ]) }}
+{% endmacro %}
+
+
+{% macro default__survival_curve(
+    spells, by, confidence, interval_scale, horizon, grid, minimum_at_risk, small_counts, weights
+) %}
+    {%- set caller_name = 'survival_curve' -%}
+    {%- set by = spellcurve._check_columns(caller_name, 'by', by, spellcurve._survival_curve_columns()) -%}
+    {%- do spellcurve._check_share(caller_name, 'confidence', confidence) -%}
+    {%- do spellcurve._check_choice(caller_name, 'interval_scale', interval_scale, spellcurve._interval_scales()) -%}
+    {%- do spellcurve._check_choice(caller_name, 'grid', grid, ['steps', 'every']) -%}
+    {%- do spellcurve._check_choice(caller_name, 'small_counts', small_counts, ['keep', 'hide']) -%}
+    {%- do spellcurve._check_choice(caller_name, 'weights', weights, ['whole', 'fractional']) -%}
+    {%- do spellcurve._check_whole(caller_name, 'minimum_at_risk', minimum_at_risk, 0) -%}
+    {%- if horizon is not none -%}
+        {%- do spellcurve._check_whole(caller_name, 'horizon', horizon, 0) -%}
+    {%- endif -%}
+    {%- set groups = spellcurve._aliases(by, 'group_') -%}
+    {%- set each_group = spellcurve._each_then_comma(groups) -%}
+    {%- set partition = spellcurve._partition_by(groups) -%}
+    {%- set z = spellcurve._normal_quantile(0.5 + confidence / 2) -%}
+
+    {%- set ctes -%}
+{{ spellcurve._risk_sets(spells, by, horizon, weights) }},
+
+hazards as (
+    select
+        *,
+        case when at_risk > 0 then events / at_risk else 0 end as hazard,
+        case when events > 0 and events >= at_risk * (1 - 1e-12) then 1 else 0 end as takes_all,
+        case when events > 0 then events / (2 * at_risk - events) else 0 end as thin_share
+    from risk_sets
+),
+
+steps_of_curve as (
+    select
+        *,
+        case when events > 0 and takes_all = 0 then {{ spellcurve._log_of_share_left('events', 'at_risk', 'thin_share') }} else 0 end as log_step,
+        case when events > 0 and takes_all = 0 then hazard / (at_risk - events) else 0 end as greenwood_step,
+        case when events > 0 then hazard / at_risk else 0 end as hazard_variance_step
+    from hazards
+),
+
+running_sums as (
+    select
+        {{ each_group }}duration, at_risk, events, censored, is_step, hazard,
+        lead(at_risk) over ({{ partition }}order by duration) as next_at_risk,
+        lead(duration) over ({{ partition }}order by duration) as next_duration,
+        {%- set so_far = partition ~ 'order by duration rows between unbounded preceding and current row' %}
+        max(takes_all) over ({{ so_far }}) as has_ended,
+        sum(log_step) over ({{ so_far }}) as log_survival,
+        sum(greenwood_step) over ({{ so_far }}) as greenwood_sum,
+        sum(hazard) over ({{ so_far }}) as cumulative_hazard,
+        sum(hazard_variance_step) over ({{ so_far }}) as cumulative_hazard_variance
+    from steps_of_curve
+),
+
+figures as (
+    select
+        {{ each_group }}duration, at_risk, events, censored, is_step, hazard, next_at_risk, next_duration, log_survival,
+        case
+            when has_ended = 1 then 0
+            when log_survival < 0 then 1
+            else 2
+        end as stage,
+        case when has_ended = 1 then 0 else {{ spellcurve._exp('log_survival') }} end as survival,
+        sqrt(greenwood_sum) as relative_error,
+        cumulative_hazard,
+        sqrt(cumulative_hazard_variance) as cumulative_hazard_std_error
+    from running_sums
+),
+
+figures_with_bounds as (
+    select
+        {{ each_group }}duration, at_risk, events, censored, is_step, hazard, next_at_risk, next_duration, survival,
+        case stage when 1 then survival * relative_error when 2 then 0 end as std_error,
+        case stage
+            when 1 then {{ spellcurve._survival_bound(interval_scale, 'survival', 'log_survival', 'relative_error', z, -1) }}
+            when 2 then 1
+        end as survival_lower,
+        case stage
+            when 1 then {{ spellcurve._survival_bound(interval_scale, 'survival', 'log_survival', 'relative_error', z, 1) }}
+            when 2 then 1
+        end as survival_upper,
+        cumulative_hazard,
+        cumulative_hazard_std_error
+    from figures
+)
+    {%- endset -%}
+
+    {%- set estimates = [
+        'hazard', 'survival', 'std_error', 'survival_lower', 'survival_upper', 'cumulative_hazard', 'cumulative_hazard_std_error'
+    ] -%}
+    {%- set body -%}
+with {{ ctes }},
+
+{% if grid == 'steps' -%}
+rows_wanted as (
+    select *
+    from figures_with_bounds
+    where is_step = 1{% if horizon is not none %} and duration <= {{ horizon }}{% endif %}
+)
+{%- else -%}
+{{ spellcurve._one_row_a_unit('figures_with_bounds', 'coalesce(next_duration, duration + 1) - duration') }},
+
+rows_wanted as (
+    select
+        {{ each_group }}duration + units_on as duration,
+        case when units_on = 0 then at_risk else next_at_risk end as at_risk,
+        case when units_on = 0 then events else 0 end as events,
+        case when units_on = 0 then censored else 0 end as censored,
+        case when units_on = 0 then hazard else 0 end as hazard,
+        survival, std_error, survival_lower, survival_upper, cumulative_hazard, cumulative_hazard_std_error
+    from units
+    {%- if horizon is not none %}
+    where duration + units_on <= {{ horizon }}
+    {%- endif %}
+)
+{%- endif %}
+
+select
+    {{ spellcurve._aliases_as(groups, by) }}{{ spellcurve._integer('duration') }} as duration,
+    {%- set enough = 'case when at_risk >= ' ~ minimum_at_risk ~ ' then ' %}
+    {%- for name in ['at_risk', 'events', 'censored'] %}
+    {%- set count = spellcurve._count(name, weights) %}
+    {{ enough ~ count ~ ' end' if small_counts == 'hide' and minimum_at_risk > 0 else count }} as {{ name }},
+    {%- endfor %}
+    {%- for name in estimates %}
+    {%- set figure = spellcurve._double(name) %}
+    {{ enough ~ figure ~ ' end' if minimum_at_risk > 0 else figure }} as {{ name }}{{ ',' if not loop.last }}
+    {%- endfor %}
+from rows_wanted
+    {%- endset -%}
+
+    {{ return(
+        spellcurve._provenance(caller_name, {'spells': spells}, {
+            'by': by, 'confidence': confidence, 'interval_scale': interval_scale, 'horizon': horizon, 'grid': grid,
+            'minimum_at_risk': minimum_at_risk, 'small_counts': small_counts, 'weights': weights
+        }) ~ '\n' ~ body
+    ) }}
+{% endmacro %}

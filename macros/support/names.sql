@@ -1,0 +1,90 @@
+{# Names of columns, lists of them, and texts, as they stand in SQL. #}
+
+{# A column's name as SQL: left as the user wrote it where the warehouse can read it so, quoted where it cannot. #}
+{% macro _column(name) %}
+    {%- set plain = modules.re.match('^[A-Za-z_][A-Za-z0-9_]*$', name) -%}
+    {%- set quoted = modules.re.match('^(".*"|`.*`|\\[.*\\])$', name) -%}
+    {%- if quoted or (plain and name | lower not in spellcurve._reserved_words()) -%}
+        {{ return(name) }}
+    {%- else -%}
+        {{ return(adapter.quote(name)) }}
+    {%- endif -%}
+{% endmacro %}
+
+
+{# The name without its quotes. #}
+{% macro _bare(name) %}
+    {{ return(modules.re.sub('^["`\\[](.*)["`\\]]$', '\\1', name)) }}
+{% endmacro %}
+
+
+{# Words that some warehouse refuses as a bare column name; a column can only bear one if it was made with quotes. #}
+{% macro _reserved_words() %}
+    {{ return([
+        'all', 'analyse', 'analyze', 'and', 'any', 'array', 'as', 'asc', 'asymmetric', 'authorization', 'between', 'binary',
+        'both', 'by', 'case', 'cast', 'check', 'collate', 'column', 'constraint', 'create', 'cross', 'cube', 'current',
+        'current_date', 'current_time', 'current_timestamp', 'current_user', 'default', 'deferrable', 'delete', 'desc',
+        'distinct', 'do', 'drop', 'else', 'end', 'except', 'exists', 'false', 'fetch', 'for', 'foreign', 'from', 'full',
+        'grant', 'group', 'having', 'ilike', 'in', 'initially', 'inner', 'insert', 'intersect', 'interval', 'into', 'is',
+        'join', 'lateral', 'leading', 'left', 'like', 'limit', 'natural', 'not', 'null', 'of', 'offset', 'on', 'only', 'or',
+        'order', 'outer', 'over', 'partition', 'placing', 'primary', 'qualify', 'range', 'references', 'returning', 'right',
+        'rollup', 'row', 'rows', 'select', 'session_user', 'set', 'similar', 'some', 'symmetric', 'table', 'then', 'to',
+        'trailing', 'true', 'union', 'unique', 'update', 'user', 'using', 'values', 'verbose', 'when', 'where', 'window',
+        'with'
+    ]) }}
+{% endmacro %}
+
+
+{# A text literal. #}
+{% macro _text(value) %}
+    {{ return("'" ~ (value | string).replace("'", "''") ~ "'") }}
+{% endmacro %}
+
+
+{% macro _texts(values) %}
+    {%- set quoted = [] -%}
+    {%- for value in values -%}
+        {%- do quoted.append(spellcurve._text(value)) -%}
+    {%- endfor -%}
+    {{ return(quoted | join(', ')) }}
+{% endmacro %}
+
+
+{# [prefix_1, prefix_2, …], one for each item: names that cannot clash with the user's. #}
+{% macro _aliases(items, prefix) %}
+    {%- set aliases = [] -%}
+    {%- for item in items -%}
+        {%- do aliases.append(prefix ~ loop.index) -%}
+    {%- endfor -%}
+    {{ return(aliases) }}
+{% endmacro %}
+
+
+{# 'a, b, ' — so that a list which may be empty can stand before other columns. #}
+{% macro _each_then_comma(items) %}
+    {{ return(items | join(', ') ~ (', ' if items else '')) }}
+{% endmacro %}
+
+
+{# 'plan as group_1, region as group_2, ' and the way back. #}
+{% macro _columns_as(names, aliases) %}
+    {%- set parts = [] -%}
+    {%- for name in names -%}
+        {%- do parts.append(spellcurve._column(name) ~ ' as ' ~ aliases[loop.index0] ~ ', ') -%}
+    {%- endfor -%}
+    {{ return(parts | join('')) }}
+{% endmacro %}
+
+
+{% macro _aliases_as(aliases, names) %}
+    {%- set parts = [] -%}
+    {%- for name in names -%}
+        {%- do parts.append(aliases[loop.index0] ~ ' as ' ~ spellcurve._column(name) ~ ', ') -%}
+    {%- endfor -%}
+    {{ return(parts | join('')) }}
+{% endmacro %}
+
+
+{% macro _partition_by(items) %}
+    {{ return('partition by ' ~ items | join(', ') ~ ' ' if items else '') }}
+{% endmacro %}
