@@ -1,0 +1,3 @@
+{{ spellcurve.survival_curve(
+    ref('reference_aids_cohort_spells')
+) }}

@@ -1,0 +1,4 @@
+{{ spellcurve.survival_curve(
+    ref('reference_channing_house_spells'),
+    by=['sex']
+) }}

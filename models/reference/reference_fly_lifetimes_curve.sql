@@ -1,0 +1,4 @@
+{{ spellcurve.survival_curve(
+    ref('reference_fly_lifetimes_spells'),
+    by=['strain']
+) }}

@@ -1,0 +1,5 @@
+{{ spellcurve.survival_curve(
+    ref('reference_maintenance_spells'),
+    by=['arm'],
+    interval_scale='log'
+) }}

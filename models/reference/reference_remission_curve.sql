@@ -1,0 +1,4 @@
+{{ spellcurve.survival_curve(
+    ref('reference_remission_spells'),
+    by=['arm']
+) }}

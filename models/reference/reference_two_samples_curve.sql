@@ -1,0 +1,4 @@
+{{ spellcurve.survival_curve(
+    ref('reference_two_samples_spells'),
+    by=['sample_name']
+) }}
