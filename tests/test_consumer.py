@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import json
 import shutil
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -14,6 +14,7 @@ import numpy as np
 import pandas as pd
 import pytest
 from dbt.cli.main import dbtRunner, dbtRunnerResult
+from dbt_common.events.base_types import EventMsg
 
 PACKAGE = Path(__file__).resolve().parents[1]
 PROJECT = PACKAGE / "tests" / "consumer"
@@ -22,6 +23,7 @@ AS_OF = pd.Timestamp("2024-07-01")
 OBSERVED_FROM = pd.Timestamp("2020-01-01")
 MADE_BY_RUNS = ("target", "dbt_packages", "logs", "package-lock.yml", "*.duckdb", ".user.yml")
 GRACE = pd.Timedelta(days=14)
+NEVER = pd.Timestamp("2200-01-01")
 
 
 @dataclass(frozen=True)
@@ -30,9 +32,9 @@ class Consumer:
 
     folder: Path
 
-    def dbt(self, *arguments: str) -> dbtRunnerResult:
+    def dbt(self, *arguments: str, on_event: Callable[[EventMsg], object] | None = None) -> dbtRunnerResult:
         place = ["--project-dir", str(self.folder), "--profiles-dir", str(self.folder)]
-        return dbtRunner().invoke(["--quiet", *arguments, *place])
+        return dbtRunner(callbacks=[on_event] if on_event else []).invoke(["--quiet", *arguments, *place])
 
     def build(self, *arguments: str) -> None:
         result = self.dbt("build", *arguments)
@@ -94,6 +96,18 @@ def test_the_dependency_adds_only_macros(built: Consumer) -> None:
     assert any(macro["package_name"] == "spellcurve" for macro in manifest["macros"].values())
 
 
+def test_the_dependency_adds_no_warning(fresh: Consumer) -> None:
+    warnings = []
+
+    def keep(event: EventMsg) -> None:
+        if event.info.level == "warn":
+            warnings.append(event.info.msg)
+
+    result = fresh.dbt("parse", on_event=keep)
+    assert result.success
+    assert warnings == []
+
+
 def test_a_listing_shows_the_users_own_things_alone(built: Consumer) -> None:
     result = built.dbt("ls", "--resource-type", "all")
     assert result.success
@@ -124,22 +138,22 @@ def test_the_database_holds_the_users_own_tables_alone(built: Consumer) -> None:
 def spells_by_hand(memberships: pd.DataFrame) -> pd.DataFrame:
     """The membership spells by the working contract's rules, one subject at a time, in plain Python."""
     spells = []
-    sound = memberships.dropna(subset=["member_id", "joined_on"])
+    sound = memberships.dropna(subset=["member_id", "joined_on"]).copy()
+    sound["ended"] = pd.to_datetime(sound["left_on"], errors="coerce")
     for member, rows in sound.groupby("member_id"):
         stretches: list[list] = []
         for row in rows.sort_values("joined_on").itertuples():
-            ended = pd.to_datetime(row.left_on, errors="coerce")
-            unreadable = pd.isna(ended) and not pd.isna(row.left_on)
-            if unreadable or ended < row.joined_on or row.joined_on > AS_OF:
+            unreadable = pd.isna(row.ended) and not pd.isna(row.left_on)
+            if unreadable or row.ended < row.joined_on or row.joined_on > AS_OF:
                 continue
-            ended = pd.NaT if ended > AS_OF else ended
-            if stretches and not pd.isna(stretches[-1][1]) and row.joined_on - stretches[-1][1] <= GRACE:
-                stretches[-1][1] = ended
+            ended = NEVER if pd.isna(row.ended) or row.ended > AS_OF else row.ended
+            if stretches and row.joined_on - stretches[-1][1] <= GRACE:
+                stretches[-1][1] = max(ended, stretches[-1][1])
             else:
                 stretches.append([row.joined_on, ended, row.plan])
         for started, ended, plan in stretches:
             known_until = AS_OF - GRACE
-            event = int(not pd.isna(ended) and ended <= known_until)
+            event = int(ended <= known_until)
             if started <= known_until and not (event and ended < OBSERVED_FROM):
                 spells.append((member, started, ended if event else known_until, event, plan))
     table = pd.DataFrame(spells, columns=["subject_id", "started_at", "last_seen_at", "event", "plan"])
@@ -180,10 +194,10 @@ def test_the_spells_are_those_that_the_rules_give(built: Consumer) -> None:
 def test_each_bad_row_is_kept_with_its_fault(built: Consumer) -> None:
     faults = built.table("membership_faults")
     stated = faults.set_index("subject_id")["fault"].to_dict()
-    assert stated["M061"] == "no_start"
-    assert stated["M062"] == "ends_before_start"
-    assert stated["M063"] == "unreadable_end"
-    assert stated["M064"] == "starts_after_as_of"
+    assert stated["M091"] == "no_start"
+    assert stated["M092"] == "ends_before_start"
+    assert stated["M093"] == "unreadable_end"
+    assert stated["M094"] == "starts_after_as_of"
     assert (faults["fault"] == "no_subject").sum() == 1
     in_spells = built.table("membership_spells")["source_rows"].sum()
     assert in_spells + len(faults) == len(built.table("memberships"))
