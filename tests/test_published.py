@@ -130,18 +130,23 @@ def without_usage_statistics() -> pytest.MonkeyPatch:
     return patch
 
 
+@dataclass(frozen=True)
+class Built(Project):
+    """The project after a build, and how that went."""
+
+    result: dbtRunnerResult
+
+
 @pytest.fixture(scope="module")
-def built(tmp_path_factory: pytest.TempPathFactory) -> Iterator[Project]:
+def built(tmp_path_factory: pytest.TempPathFactory) -> Iterator[Built]:
     patch = without_usage_statistics()
     project = copied_to(tmp_path_factory.mktemp("published") / "project")
-    result = project.dbt("build")
-    assert result.success, failures(result)
-    yield project
+    yield Built(project.folder, project.dbt("build"))
     patch.undo()
 
 
 @pytest.fixture(scope="module")
-def tables(built: Project) -> dict[str, pd.DataFrame]:
+def tables(built: Built) -> dict[str, pd.DataFrame]:
     return {curve.model: built.table(curve.model) for curve in CURVES}
 
 
@@ -174,6 +179,16 @@ def assert_equal(ours: pd.Series, theirs: object, tolerance: float) -> None:
 
 
 every_curve = pytest.mark.parametrize("curve", CURVES, ids=lambda curve: curve.model)
+
+
+def test_every_seed_model_and_test_of_the_reference_part_passes(built: Built) -> None:
+    assert built.result.success, failures(built.result)
+    kinds = Counter(node.node.resource_type.value for node in built.result.result.results)
+    assert kinds == {
+        "seed": len(GROUPS) + 1,
+        "model": len(GROUPS) + len(CURVES) + 2,
+        "test": len(GROUPS) + len(CURVES) + 2,
+    }
 
 
 # Against independent estimators
@@ -266,7 +281,7 @@ def test_a_curve_agrees_with_exact_arithmetic(curve: Curve, tables: dict[str, pd
 
 
 @pytest.mark.parametrize("data_set", GROUPS)
-def test_every_row_of_a_data_set_is_one_spell(data_set: str, built: Project) -> None:
+def test_every_row_of_a_data_set_is_one_spell(data_set: str, built: Built) -> None:
     data, group = seed(data_set), GROUPS[data_set]
     columns = [*([group] if group else []), "entry", "duration", "event", "weight"]
     assert rows_of(built.table(f"reference_{data_set}_spells")[columns]) == rows_of(data[columns])
@@ -314,7 +329,7 @@ def test_our_curves_give_every_published_figure(data_set: str, tables: dict[str,
 
 
 def test_the_agreement_model_judges_every_published_figure(
-    built: Project, tables: dict[str, pd.DataFrame]
+    built: Built, tables: dict[str, pd.DataFrame]
 ) -> None:
     agreement = built.table("reference_agreement")
     keys = ["data_set", "group_value", "figure", "duration"]
@@ -399,7 +414,7 @@ def test_counting_late_entrants_from_the_start_would_flatter_the_cohort(
 
 
 def test_the_grouped_two_sample_estimate_equals_the_one_from_single_items(
-    built: Project, tables: dict[str, pd.DataFrame]
+    built: Built, tables: dict[str, pd.DataFrame]
 ) -> None:
     """280 of 1,100 survive the first year and 15 of the remaining 30 of the first sample the second."""
     rows = tables["reference_two_samples_overall_curve"].set_index("duration").sort_index()
