@@ -107,7 +107,16 @@ def compare_curves(
         by: names of the grouping columns.
         tolerance: largest relative difference that still counts as agreement.
         columns: figures to compare.
+
+    Raises:
+        ValueError: the groups have more or fewer values than there are grouping columns.
     """
+    for group in expected:
+        if len(group) != len(by):
+            raise ValueError(
+                f"The expected group {group!r} has values for {_count(len(group), 'grouping column')}, "
+                f"but by is {list(by)!r}; name as many columns."
+            )
     found = Comparison()
     rows = [{name.lower(): value for name, value in row.items()} for row in actual]
     present = _present(rows, by, columns, found)

@@ -6,11 +6,11 @@ What lifelines vouches for (see ``IndependentCurve.columns``):
   at risk at t, though its curve does not; they are taken off again here, except at 0, where those with entry
   0 are at risk.
 - survival: its product-limit curve, which already leaves out those who enter at t.
-- survival_lower, survival_upper: on the log-log scale alone, the only one it computes.
+- survival_lower, survival_upper: on the log-log scale alone, the only one it computes, and for whole weights
+  alone, since it rounds the number at risk down in the variance.
 - cumulative_hazard: its Nelson-Aalen sum, with ties taken together (no smoothing).
 
-What it does not vouch for, left None: std_error (it keeps that figure to itself), bounds on other scales,
-and cumulative_hazard_std_error (it uses the binomial variance d (n - d) / n³ where ours is d / n²). Where
+What it does not vouch for, left None: std_error (it keeps that figure to itself), other bounds, and cumulative_hazard_std_error (it uses the binomial variance d (n - d) / n³ where ours is d / n²). Where
 survival falls to 0 while later spells are still to enter, it refuses to fit a curve: then it vouches for the
 counts and the cumulative hazard alone.
 
@@ -31,7 +31,16 @@ from lifelines import KaplanMeierFitter, NelsonAalenFitter
 from lifelines.exceptions import StatError
 from lifelines.utils import survival_table_from_events
 
-from spellcurve.exact import BOUNDS, COUNTS, CurveRow, Spell, as_published, check_options, shown_durations
+from spellcurve.exact import (
+    BOUNDS,
+    COUNTS,
+    CurveRow,
+    Spell,
+    as_published,
+    check_options,
+    is_whole,
+    shown_durations,
+)
 
 
 @dataclass(frozen=True)
@@ -103,7 +112,7 @@ def _fit(
             return table, columns
     table["survival"] = _on(table, curve.survival_function_.iloc[:, 0])
     columns = (*columns, "survival")
-    if interval_scale == "log-log":
+    if interval_scale == "log-log" and all(is_whole(spell.weight) for spell in spells):
         for place, name in enumerate(BOUNDS):
             table[name] = _on(table, curve.confidence_interval_.iloc[:, place])
         columns = (*columns, *BOUNDS)

@@ -1,7 +1,7 @@
-"""The six spell builders once more, in plain Python: slow, obvious, written from the rules and not from the SQL.
+"""The six spell builders once more, in plain Python: slow, obvious, written from the rules alone.
 
-Every builder takes its source rows as dicts and returns two lists of dicts: the sound spells and the source rows
-that were refused. Each source row is in exactly one of the two.
+Every builder takes its source rows as dicts and returns two lists of dicts: the sound spells and the source
+rows that were refused. Each source row is in exactly one of the two.
 
 Where the rules leave a choice open, the choice taken here is: rows that tie on everything the rules order by
 keep the order of the input; among several causes that tie, null yields to text; a null sequence comes last.
