@@ -15,10 +15,13 @@ from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass
 from datetime import date, timedelta
 from pathlib import Path
+from typing import TYPE_CHECKING
 
-import duckdb
 import numpy as np
 import pandas as pd
+
+if TYPE_CHECKING:
+    import duckdb
 
 DEFAULT_MEMBERS = 3_000
 DEFAULT_SEED = 1897
@@ -544,7 +547,7 @@ def _logged_again(some: Stints, count: int, dice: _Dice) -> Iterator[tuple[int, 
 
 
 def _loan_days(stints: Stints, dice: _Dice) -> tuple[Ints, Ints]:
-    """Member and day of every loan: a round of draws for the first of each stint and for each that follows."""
+    """Member and day of every loan: one round for the first of each stint, one for each next."""
     stop = np.minimum(stints.end, _AS_OF)
     member, plan, day = stints.member, stints.plan, stints.start
     member_rounds: list[Ints] = []
@@ -714,6 +717,8 @@ def write_tables(
 
 def write_seeds(folder: Path, members: int = DEFAULT_MEMBERS, seed: int = DEFAULT_SEED) -> list[Path]:
     """Writes the demo's source tables as CSV files into an existing folder; gives their paths."""
+    import duckdb  # not at the top, for the command line's sake: it reads this module's defaults
+
     paths = []
     with duckdb.connect() as connection:
         write_tables(connection, "main", members, seed)

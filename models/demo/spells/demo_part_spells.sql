@@ -5,5 +5,6 @@
     subject='part_id',
     entry='hours_before_meter',
     unit='hour',
-    carry=['part']
+    carry=['part'],
+    source_rows=true
 ) }}

@@ -1,0 +1,242 @@
+"""The `spellcurve` command: reads options, calls the library, prints what it found."""
+
+from __future__ import annotations
+
+import importlib.util
+import json
+import shlex
+import time
+from collections.abc import Iterator
+from contextlib import contextmanager
+from datetime import date
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated
+
+import typer
+from rich.console import Console
+from rich.markup import escape
+from rich.padding import Padding
+from rich.table import Table
+
+from spellcurve import __version__
+from spellcurve.compare import TOLERANCE
+from spellcurve.generate import DEFAULT_MEMBERS, DEFAULT_SEED, FEWEST_MEMBERS, MOST_MEMBERS
+from spellcurve.summary import faults_in_words, half_in_words, share_in_words
+
+if TYPE_CHECKING:
+    from spellcurve.demo import Answer, DemoResult, Step
+
+AGREEMENT, DISAGREEMENT, COULD_NOT_RUN = 0, 1, 2
+_SHOWN_DISAGREEMENTS = 5
+
+app = typer.Typer(
+    no_args_is_help=True, add_completion=False, pretty_exceptions_enable=False, rich_markup_mode="markdown"
+)
+
+
+def _show_version(asked: bool) -> None:
+    if asked:
+        typer.echo(f"spellcurve {__version__}")
+        raise typer.Exit
+
+
+@app.callback()
+def spellcurve(
+    version: Annotated[
+        bool,
+        typer.Option("--version", callback=_show_version, is_eager=True, help="Show the version and stop."),
+    ] = False,
+) -> None:
+    """Prove that the time-to-event figures in a warehouse are right.
+
+    Start with: spellcurve demo
+    """
+
+
+@app.command()
+def demo(
+    folder: Annotated[
+        Path, typer.Option(help="Where to put the database, dbt's logs and everything else the demo writes.")
+    ] = Path("spellcurve-demo"),
+    members: Annotated[
+        int,
+        typer.Option(min=FEWEST_MEMBERS, max=MOST_MEMBERS, help="How many members the invented library has."),
+    ] = DEFAULT_MEMBERS,
+    seed: Annotated[
+        int, typer.Option(min=0, help="Another seed invents another library of the same kind.")
+    ] = DEFAULT_SEED,
+    check_only: Annotated[
+        bool,
+        typer.Option(
+            "--check-only",
+            help="Build nothing; check and show the tables that an earlier run left in the folder.",
+        ),
+    ] = False,
+) -> None:
+    """Build the figures of an invented tool library on DuckDB, check every one, and show them.
+
+    Records of the Harrow Lane Tool Library, untidy on purpose, become spells and curves by way of dbt,
+    in a database file of your own. Each figure is then recomputed with lifelines and in exact fractions.
+
+    Exit status: 0 all figures agree, 1 some do not, 2 the demo could not run.
+    """
+    out = Console(highlight=False)
+    _check_duckdb()
+    from spellcurve.demo import (
+        DemoError,
+        run_demo,
+    )  # not at the top: dbt takes seconds to load, --help should not
+
+    try:
+        result = run_demo(folder, members, seed, check_only, _steps(out))
+    except DemoError as error:
+        raise _could_not_run(str(error)) from error
+    _print_result(out, result)
+    raise typer.Exit(AGREEMENT if result.agrees else DISAGREEMENT)
+
+
+def _check_duckdb() -> None:
+    for module, package in (("duckdb", "duckdb"), ("dbt.adapters.duckdb", "dbt-duckdb")):
+        if importlib.util.find_spec(module) is None:
+            raise _could_not_run(f"{package} is not installed; run: pip install 'spellcurve[duckdb]'")
+
+
+def _could_not_run(sentence: str) -> typer.Exit:
+    Console(stderr=True, highlight=False, soft_wrap=True).print(f"[red]Could not run:[/] {escape(sentence)}")
+    return typer.Exit(COULD_NOT_RUN)
+
+
+def _steps(out: Console) -> Step:
+    @contextmanager
+    def step(doing: str) -> Iterator[None]:
+        started = time.monotonic()
+        with out.status(f"{doing} …"):
+            yield
+        out.print(f"[green]✓[/] {doing} [dim]({time.monotonic() - started:.1f} s)[/]")
+
+    return step
+
+
+def _print_result(out: Console, result: DemoResult) -> None:
+    out.print()
+    out.print(
+        "[bold]The Harrow Lane Tool Library[/], all of it made up, "
+        f"as known at the start of {_date(result.as_of)}.\n"
+        f"{result.members:,} members are on its books; {result.still_members:,} were still members on "
+        f"{_date(result.known_until)}."
+    )
+    for answer in result.answers:
+        _print_answer(out, answer)
+    out.print("\n[dim]In brackets: 95% interval of each figure by itself.[/]")
+    _print_refusals(out, result)
+    _print_agreement(out, result)
+    _print_where(out, result)
+
+
+def _date(day: date) -> str:
+    return f"{day.day} {day:%B %Y}"
+
+
+def _print_answer(out: Console, answer: Answer) -> None:
+    question = answer.question
+    table = _plain_table()
+    table.add_column("")
+    for group in answer.groups:
+        table.add_column(group.label, style="none")
+    table.add_row("spells", *(f"{group.spells:,}" for group in answer.groups))
+    table.add_row("still going", *(f"{group.open_spells:,}" for group in answer.groups))
+    table.add_row("followed for", *(f"{group.follow_up:,} {question.unit}" for group in answer.groups))
+    table.add_row(f"{question.half_means}", *map(half_in_words, answer.groups))
+    for place, duration in enumerate(question.durations):
+        table.add_row(
+            f"{question.survival_means} {duration:,} {question.unit}",
+            *(share_in_words(group.shares[place]) for group in answer.groups),
+        )
+    out.print(f"\n[bold]{question.title}[/]")
+    out.print(f"[dim]{question.note}[/]")
+    out.print(Padding(table, (0, 0, 0, 2)))
+
+
+def _plain_table() -> Table:
+    return Table(box=None, pad_edge=False, padding=(0, 2, 0, 0), header_style="bold")
+
+
+def _print_refusals(out: Console, result: DemoResult) -> None:
+    table = _plain_table()
+    table.add_column("records", no_wrap=True)
+    table.add_column("rows", justify="right")
+    table.add_column("refused", justify="right")
+    table.add_column("why")
+    for refusals in result.refusals:
+        table.add_row(
+            "\n".join(refusals.sources),
+            f"{refusals.rows:,}",
+            f"{refusals.refused:,}",
+            faults_in_words(refusals.faults),
+        )
+    out.print("\n[bold]Which rows could not be used?[/]")
+    out.print("[dim]Every other row is part of exactly one spell; a dbt test counts them.[/]")
+    out.print(Padding(table, (0, 0, 0, 2)))
+
+
+def _print_agreement(out: Console, result: DemoResult) -> None:
+    out.print("\n[bold]Are the figures right?[/]")
+    exact = sum(curve.exact.figures for curve in result.checked)
+    independent = sum(one.figures for curve in result.checked for one in curve.independent)
+    out.print(
+        f"{_tick(not result.disagreements)} {len(result.checked)} curves: {exact:,} figures compared with "
+        f"exact fractions, {independent:,} with lifelines; "
+        f"largest relative difference {result.largest_difference:.1e} (allowed {_short_power(TOLERANCE)})."
+    )
+    for model, sentences in result.disagreements.items():
+        out.print(f"  [red]{model}[/]: {len(sentences):,} figures or rows disagree.")
+        for sentence in sentences[:_SHOWN_DISAGREEMENTS]:
+            out.print(Padding(escape(sentence), (0, 0, 0, 4)))
+    passed = result.tests_run - len(result.tests_failed)
+    out.print(f"{_tick(not result.tests_failed)} {passed} of {result.tests_run} dbt tests passed.")
+    for name in result.tests_failed:
+        out.print(f"  [red]{name}[/]")
+
+
+def _short_power(number: float) -> str:
+    return f"{number:.0e}".replace("e-0", "e-")
+
+
+def _tick(good: bool) -> str:
+    return "[green]✓[/]" if good else "[red]✗[/]"
+
+
+def _print_where(out: Console, result: DemoResult) -> None:
+    database = _short(result.database)
+    table = _plain_table()
+    table.show_header = False
+    table.add_row("file", escape(str(database)))
+    table.add_row("schema", result.schema)
+    table.add_row("curves", ", ".join(curve.model for curve in result.checked))
+    table.add_row("spells", ", ".join(refusals.spells for refusals in result.refusals))
+    table.add_row("refused rows", "beside each spell table, under its name with _faulty")
+    table.add_row("records", ", ".join(result.records))
+    out.print("\n[bold]Where is it?[/]")
+    out.print(Padding(table, (0, 0, 0, 2)))
+    tamper = f"update {result.schema}.demo_part_survival set survival = 0.5 where duration = 0"
+    again = f"spellcurve demo --check-only --folder {shlex.quote(str(database.parent))}"
+    out.print("\nTo look at a table:")
+    _print_command(
+        out, _in_python(database, f'table("{result.schema}.demo_membership_survival_by_plan").show()')
+    )
+    out.print("To see the check catch a wrong figure:")
+    _print_command(out, _in_python(database, f'execute("{tamper}")'))
+    _print_command(out, again)
+
+
+def _in_python(database: Path, call: str) -> str:
+    return f"python -c {shlex.quote(f'import duckdb; duckdb.connect({json.dumps(str(database))}).{call}')}"
+
+
+def _print_command(out: Console, command: str) -> None:
+    out.print(f"  {command}", markup=False, soft_wrap=True)
+
+
+def _short(path: Path) -> Path:
+    """The path as seen from the working directory, where it lies below it."""
+    return path.relative_to(Path.cwd()) if path.is_relative_to(Path.cwd()) else path

@@ -1,0 +1,463 @@
+"""Builds the demo on a DuckDB file, checks every curve of it and gathers what there is to tell."""
+
+from __future__ import annotations
+
+import json
+import shutil
+from collections.abc import Callable, Mapping, Sequence
+from contextlib import AbstractContextManager, nullcontext
+from dataclasses import dataclass
+from datetime import date, timedelta
+from pathlib import Path
+from typing import Any
+
+import duckdb
+from dbt.cli.main import dbtRunner
+
+from spellcurve import generate
+from spellcurve.compare import Comparison, compare_curves
+from spellcurve.exact import Spell, group_spells, survival_curves
+from spellcurve.independent import independent_curves
+from spellcurve.provenance import Provenance, first_provenance
+from spellcurve.summary import GroupFigures, figures
+
+DATABASE = "tool_library.duckdb"
+SCHEMA = "harrow_lane"
+GRACE_DAYS = 30
+
+_MARK = "# Written by `spellcurve demo`; built again with every run."
+_CURVE_OPTIONS = (
+    "confidence",
+    "interval_scale",
+    "horizon",
+    "grid",
+    "minimum_at_risk",
+    "small_counts",
+    "weights",
+)
+
+Step = Callable[[str], AbstractContextManager[Any]]
+Rows = list[dict[str, Any]]
+
+
+class DemoError(Exception):
+    """The demo cannot go on; the message is one sentence for the user."""
+
+
+@dataclass(frozen=True)
+class Question:
+    """One thing the summary tells: curves with how they are split, their spells, durations to read."""
+
+    title: str
+    note: str
+    unit: str
+    survival_means: str
+    half_means: str
+    curves: tuple[tuple[str, str | None], ...]
+    spells: str
+    durations: tuple[int, ...]
+
+
+QUESTIONS = (
+    Question(
+        "How long do members stay?",
+        "A spell is a stretch of membership. A break of up to 30 days does not end it, so an end is only\n"
+        "certain 30 days later. Those who joined before July 2020 are known from paper records, and\n"
+        "count only from then on: nobody wrote down who had left before.",
+        "days",
+        "still members after",
+        "half have left by day",
+        (("demo_membership_survival", None), ("demo_membership_survival_by_plan", "plan")),
+        "demo_membership_spells",
+        (30, 90, 365),
+    ),
+    Question(
+        "How soon do they borrow their first tool?",
+        "A spell runs from joining to the first loan; who has not borrowed yet is still going.",
+        "days",
+        "nothing borrowed after",
+        "half have borrowed by day",
+        (("demo_first_loan_survival", "plan"),),
+        "demo_first_loan_spells",
+        (7, 30, 365),
+    ),
+    Question(
+        "How long do parts of the workshop's machines last?",
+        "A spell is the life of a part, in hours of running.",
+        "hours",
+        "not worn out after",
+        "half are worn out by hour",
+        (("demo_part_survival", "part"),),
+        "demo_part_spells",
+        (100, 500, 1_000),
+    ),
+)
+
+#: Every spell table of the demo, and the tables whose rows it accounts for.
+SOURCES: dict[str, tuple[str, ...]] = {
+    "demo_membership_spells": ("demo_memberships",),
+    "demo_desk_spells": ("demo_desk_log",),
+    "demo_status_spells": ("demo_status_changes",),
+    "demo_roll_spells": ("demo_sunday_roll",),
+    "demo_borrowing_spells": ("demo_joiner_loans",),
+    "demo_first_loan_spells": ("demo_joiners", "demo_joiner_loans"),
+    "demo_part_spells": ("demo_machine_parts",),
+}
+
+
+@dataclass(frozen=True)
+class Answer:
+    """A question and the figures of its groups, everybody first."""
+
+    question: Question
+    groups: tuple[GroupFigures, ...]
+
+
+@dataclass(frozen=True)
+class Refusals:
+    """Rows that a spell table could not use: rows read in all, and counts by fault code."""
+
+    spells: str
+    sources: tuple[str, ...]
+    rows: int
+    faults: dict[str, int]
+
+    @property
+    def refused(self) -> int:
+        """Rows refused in all."""
+        return sum(self.faults.values())
+
+
+@dataclass(frozen=True)
+class CheckedCurve:
+    """A curve table compared with exact fractions, and, group by group, with lifelines."""
+
+    model: str
+    exact: Comparison
+    independent: tuple[Comparison, ...]
+
+    @property
+    def comparisons(self) -> tuple[Comparison, ...]:
+        """All comparisons, that with exact fractions first."""
+        return (self.exact, *self.independent)
+
+    @property
+    def agrees(self) -> bool:
+        """Whether every figure agrees."""
+        return all(comparison.agrees for comparison in self.comparisons)
+
+
+@dataclass(frozen=True)
+class DemoResult:
+    """Everything the demo found."""
+
+    database: Path
+    schema: str
+    as_of: date
+    known_until: date
+    members: int
+    still_members: int
+    answers: tuple[Answer, ...]
+    refusals: tuple[Refusals, ...]
+    checked: tuple[CheckedCurve, ...]
+    tests_run: int
+    tests_failed: tuple[str, ...]
+    records: tuple[str, ...] = generate.TABLES
+
+    @property
+    def disagreements(self) -> dict[str, list[str]]:
+        """Sentences about every figure that is wrong, by curve; curves without any are left out."""
+        found = {
+            curve.model: [str(one) for comparison in curve.comparisons for one in comparison.disagreements]
+            for curve in self.checked
+        }
+        return {model: sentences for model, sentences in found.items() if sentences}
+
+    @property
+    def largest_difference(self) -> float:
+        """Largest relative difference of any figure from what it should be."""
+        return max(one.largest_difference for curve in self.checked for one in curve.comparisons)
+
+    @property
+    def agrees(self) -> bool:
+        """Whether every figure agrees and every test passed."""
+        return not self.tests_failed and not self.disagreements
+
+
+def run_demo(
+    folder: Path,
+    members: int = generate.DEFAULT_MEMBERS,
+    seed: int = generate.DEFAULT_SEED,
+    check_only: bool = False,
+    step: Step = lambda doing: nullcontext(),
+) -> DemoResult:
+    """Builds the demo in a folder, checks it and gathers the figures.
+
+    Args:
+        folder: where everything is written; made if it is not there.
+        members: size of the library.
+        seed: of the random records.
+        check_only: look at what an earlier run left in the folder instead of building it.
+        step: is called with what is being done, and gives a context manager to do it in.
+
+    Raises:
+        DemoError: the demo cannot be built or read.
+    """
+    demo = _Demo(folder.expanduser().resolve())
+    if check_only:
+        demo.check_is_there()
+    else:
+        with step(f"Writing the records of {members:,} members"):
+            demo.prepare()
+            demo.write_records(members, seed)
+        with step("Building spells and curves with dbt"):
+            demo.dbt("run", "--select", "path:models/demo")
+    with step("Running the package's tests with dbt"):
+        tests = demo.dbt("test", "--select", "path:models/demo")
+    with step("Recomputing every curve with lifelines and in exact fractions"):
+        checked = demo.check_curves()
+    with step("Reading off the figures"):
+        return demo.result(checked, tests)
+
+
+def find_project() -> Path:
+    """The folder of the package's dbt project: beside this module in a wheel, else the checkout's root.
+
+    Raises:
+        DemoError: there is no dbt_project.yml in either place.
+    """
+    here = Path(__file__).resolve()
+    for folder in (here.parent / "dbt_package", here.parents[2]):
+        if (folder / "dbt_project.yml").is_file():
+            return folder
+    raise DemoError(
+        f"There is no dbt_project.yml in {here.parent / 'dbt_package'} or {here.parents[2]}; "
+        "install the spellcurve package again."
+    )
+
+
+class _Demo:
+    """The demo in one folder."""
+
+    def __init__(self, folder: Path) -> None:
+        self.folder = folder
+        self.database = folder / DATABASE
+        self.compiled = folder / "target" / "compiled" / "spellcurve" / "models" / "demo"
+        self.project = find_project()
+
+    def prepare(self) -> None:
+        """Makes the folder and its profile, and removes the database of an earlier run."""
+        profile = self.folder / "profiles.yml"
+        try:
+            self.folder.mkdir(parents=True, exist_ok=True)
+            if profile.exists() and not profile.read_text(encoding="utf-8").startswith(_MARK):
+                raise DemoError(f"{profile} is not the demo's own; give another folder with --folder.")
+            if self.database.exists() and not profile.exists():
+                raise DemoError(f"{self.database} is not the demo's own; give another folder with --folder.")
+            self._write_profile()
+            for leftover in (self.database, self.database.with_suffix(".duckdb.wal")):
+                leftover.unlink(missing_ok=True)
+            shutil.rmtree(self.compiled, ignore_errors=True)
+        except (OSError, UnicodeDecodeError) as error:
+            reason = getattr(error, "strerror", None) or str(error)
+            raise DemoError(
+                f"The folder {self.folder} cannot be used ({reason}); give another one with --folder."
+            ) from error
+
+    def _write_profile(self) -> None:
+        output = {"type": "duckdb", "path": str(self.database), "schema": SCHEMA, "threads": 2}
+        profile = {"spellcurve": {"target": "demo", "outputs": {"demo": output}}}
+        text = f"{_MARK}\n{json.dumps(profile, indent=2)}\n"
+        (self.folder / "profiles.yml").write_text(text, encoding="utf-8")
+
+    def check_is_there(self) -> None:
+        """Raises DemoError if no earlier run left its tables and its compiled SQL here."""
+        if not (self.database.is_file() and self._compiled_curves()):
+            raise DemoError(f"There is no finished demo in {self.folder}; run it without --check-only first.")
+        self._write_profile()  # the folder may have been moved
+
+    def write_records(self, members: int, seed: int) -> None:
+        """Fills the source tables: the committed seeds by dbt, or any other library by the generator.
+
+        Both write tables of the same names and types, so that the models need not know.
+        """
+        if (members, seed) == (generate.DEFAULT_MEMBERS, generate.DEFAULT_SEED):
+            self.dbt("seed", "--select", "path:seeds/demo")
+            return
+        with self._connect() as connection:
+            try:
+                generate.write_tables(connection, SCHEMA, members, seed)
+            except ValueError as error:
+                raise DemoError(str(error)) from error
+
+    def dbt(self, command: str, *arguments: str) -> Sequence[Any]:
+        """Runs dbt on the package's project and gives its results, node by node.
+
+        Raises:
+            DemoError: dbt could not do it. Tests that fail are results, not errors.
+        """
+        done = dbtRunner().invoke(
+            [
+                "--log-level", "none",
+                "--log-level-file", "debug",
+                "--no-send-anonymous-usage-stats",
+                "--no-use-colors",
+                "--no-use-colors-file",
+                command,
+                *arguments,
+                "--project-dir", str(self.project),
+                "--profiles-dir", str(self.folder),
+                "--profile", "spellcurve",
+                "--target", "demo",
+                "--target-path", str(self.folder / "target"),
+                "--log-path", str(self.folder / "logs"),
+                "--vars", json.dumps({"spellcurve_demo": True}),
+            ]
+        )  # fmt: skip
+        results: Sequence[Any] = getattr(done.result, "results", None) or []
+        broken = [result for result in results if result.status not in ("success", "pass", "fail", "warn")]
+        if done.exception is not None or broken or not results:
+            raise DemoError(self._what_dbt_says(command, done.exception, broken))
+        return results
+
+    def _what_dbt_says(self, command: str, exception: BaseException | None, broken: Sequence[Any]) -> str:
+        where = f"; the whole log is {self.folder / 'logs' / 'dbt.log'}."
+        failed = [result for result in broken if result.status != "skipped"]
+        if failed:
+            message = " ".join(str(failed[0].message).split())
+            return f"dbt {command} failed at {failed[0].node.name} ({message}){where}"
+        said = "nothing was selected" if exception is None else " ".join(str(exception).split())
+        return f"dbt {command} could not run ({said}){where}"
+
+    def _connect(self) -> duckdb.DuckDBPyConnection:
+        try:
+            return duckdb.connect(str(self.database))
+        except duckdb.Error as error:
+            raise DemoError(
+                f"{self.database} cannot be opened; close the program that has it open, or give another "
+                f"folder with --folder ({' '.join(str(error).split())})."
+            ) from error
+
+    def _compiled_curves(self) -> dict[str, Provenance]:
+        """Every compiled model that is a survival curve, by name."""
+        curves = {}
+        for path in sorted(self.compiled.glob("*/demo_*.sql")):
+            provenance = first_provenance(path.read_text(encoding="utf-8"), "survival_curve", path.stem)
+            if provenance is not None:
+                curves[path.stem] = provenance
+        return curves
+
+    def check_curves(self) -> tuple[CheckedCurve, ...]:
+        """Recomputes every curve from its spells, as aggregated by the database, and compares all figures."""
+        with self._connect() as connection:
+            return tuple(
+                _check_curve(connection, model, provenance)
+                for model, provenance in self._compiled_curves().items()
+            )
+
+    def result(self, checked: tuple[CheckedCurve, ...], tests: Sequence[Any]) -> DemoResult:
+        """Gathers the figures from the tables."""
+        with self._connect() as connection:
+            return DemoResult(
+                database=self.database,
+                schema=SCHEMA,
+                as_of=generate.AS_OF,
+                known_until=generate.AS_OF - timedelta(days=GRACE_DAYS),
+                members=_count(connection, "demo_members", "joined_on is not null"),
+                still_members=_count(connection, "demo_membership_spells", "event = 0"),
+                answers=tuple(_answer(connection, question) for question in QUESTIONS),
+                refusals=tuple(_refusals(connection, *known) for known in SOURCES.items()),
+                checked=checked,
+                tests_run=len(tests),
+                tests_failed=tuple(one.node.name for one in tests if one.status not in ("pass", "warn")),
+            )
+
+
+def _table(name: str) -> str:
+    return f'"{SCHEMA}"."{name}"'
+
+
+def _quoted(names: Sequence[str]) -> list[str]:
+    return ['"' + name.replace('"', '""') + '"' for name in names]
+
+
+def _rows(connection: duckdb.DuckDBPyConnection, sql: str) -> Rows:
+    try:
+        found = connection.execute(sql)
+    except duckdb.Error as error:
+        reason = " ".join(str(error).split())
+        raise DemoError(f"The demo's tables cannot be read ({reason}); build the demo again.") from error
+    names = [column[0] for column in found.description or []]
+    return [dict(zip(names, row, strict=True)) for row in found.fetchall()]
+
+
+def _count(connection: duckdb.DuckDBPyConnection, table: str, where: str = "true") -> int:
+    rows = _rows(connection, f"select count(*) as counted from {_table(table)} where {where}")
+    return int(rows[0]["counted"])
+
+
+def _check_curve(connection: duckdb.DuckDBPyConnection, model: str, provenance: Provenance) -> CheckedCurve:
+    by = provenance.by
+    options = {name: provenance.options[name] for name in _CURVE_OPTIONS if name in provenance.options}
+    columns = ", ".join([*_quoted(by), "entry", "duration", "event"])
+    spells = group_spells(
+        Spell(row["entry"], row["duration"], row["event"], int(row["weight"]), None, _group(row, by))
+        for row in _rows(
+            connection, f"select {columns}, sum(weight) as weight from {provenance.spells} group by {columns}"
+        )
+    )
+    published = _rows(connection, f"select * from {_table(model)}")
+    exact = compare_curves(published, survival_curves(spells, **options), by)
+    return CheckedCurve(model, exact, _compare_with_lifelines(published, spells, by, options))
+
+
+def _group(row: Mapping[str, Any], by: Sequence[str]) -> tuple[Any, ...]:
+    return tuple(row[name] for name in by)
+
+
+def _compare_with_lifelines(
+    published: Rows,
+    spells: Mapping[tuple[Any, ...], list[Spell]],
+    by: Sequence[str],
+    options: Mapping[str, Any],
+) -> tuple[Comparison, ...]:
+    """Group by group, since lifelines may vouch for other columns in each."""
+    rows_of: dict[tuple[Any, ...], Rows] = {}
+    for row in published:
+        rows_of.setdefault(_group(row, by), []).append(row)
+    return tuple(
+        compare_curves(rows_of.get(group, []), {group: curve.rows}, by, columns=curve.columns)
+        for group, curve in independent_curves(spells, **options).items()
+    )
+
+
+def _answer(connection: duckdb.DuckDBPyConnection, question: Question) -> Answer:
+    groups: list[GroupFigures] = []
+    for curve, by in question.curves:
+        label = f'"{by}"' if by else "'everybody'"
+        counted = _rows(
+            connection,
+            f"select {label} as label, count(*) as spells, sum(1 - event) as still_open "
+            f"from {_table(question.spells)} group by 1 order by 1",
+        )
+        rows = _rows(
+            connection,
+            f"select {label} as label, duration, survival, survival_lower, survival_upper "
+            f"from {_table(curve)} order by duration",
+        )
+        for group in counted:
+            own = [row for row in rows if row["label"] == group["label"]]
+            groups.append(
+                figures(
+                    str(group["label"]), own, group["spells"], int(group["still_open"]), question.durations
+                )
+            )
+    return Answer(question, tuple(groups))
+
+
+def _refusals(connection: duckdb.DuckDBPyConnection, spells: str, sources: tuple[str, ...]) -> Refusals:
+    rows = sum(_count(connection, name) for name in sources)
+    faults = _rows(
+        connection, f"select fault, count(*) as refused from {_table(spells + '_faulty')} group by fault"
+    )
+    return Refusals(spells, sources, rows, {row["fault"]: row["refused"] for row in faults})
