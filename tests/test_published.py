@@ -83,6 +83,11 @@ CURVES = (
     Curve("fly_lifetimes", "strain"),
     Curve("fly_lifetimes"),
 )
+EVERYTHING = {
+    "seed": len(GROUPS) + 1,
+    "model": len(GROUPS) + len(CURVES) + 2,
+    "test": len(GROUPS) + len(CURVES) + 2,
+}
 
 
 @dataclass(frozen=True)
@@ -122,6 +127,10 @@ def failures(result: dbtRunnerResult) -> str:
         f"{node.node.unique_id}: {node.message}" for node in nodes if node.status not in ("success", "pass")
     ]
     return "\n".join([*said, str(result.exception or "")])
+
+
+def kinds_of_nodes(result: dbtRunnerResult) -> dict[str, int]:
+    return dict(Counter(node.node.resource_type.value for node in result.result.results))
 
 
 def without_usage_statistics() -> pytest.MonkeyPatch:
@@ -183,12 +192,25 @@ every_curve = pytest.mark.parametrize("curve", CURVES, ids=lambda curve: curve.m
 
 def test_every_seed_model_and_test_of_the_reference_part_passes(built: Built) -> None:
     assert built.result.success, failures(built.result)
-    kinds = Counter(node.node.resource_type.value for node in built.result.result.results)
-    assert kinds == {
-        "seed": len(GROUPS) + 1,
-        "model": len(GROUPS) + len(CURVES) + 2,
-        "test": len(GROUPS) + len(CURVES) + 2,
-    }
+    assert kinds_of_nodes(built.result) == EVERYTHING
+
+
+def test_a_depending_project_turns_the_reference_part_on_by_its_variable(tmp_path: Path) -> None:
+    """Nothing of it may be left out there: dbt shows the project file of a dependency no variables."""
+    patch = without_usage_statistics()
+    copied_to(tmp_path / "package")
+    depending = Project(tmp_path / "depending")
+    depending.folder.mkdir()
+    shutil.copy(tmp_path / "package" / "profiles.yml", depending.folder)
+    (depending.folder / "dbt_project.yml").write_text(
+        "name: depending\nversion: '1.0'\nconfig-version: 2\nprofile: spellcurve\n"
+    )
+    (depending.folder / "packages.yml").write_text("packages:\n  - local: ../package\n")
+    assert depending.dbt("deps").success
+    result = depending.dbt("build", "--select", "package:spellcurve")
+    patch.undo()
+    assert result.success, failures(result)
+    assert kinds_of_nodes(result) == EVERYTHING
 
 
 # Against independent estimators
