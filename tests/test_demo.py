@@ -89,7 +89,7 @@ def test_generator_refuses_other_sizes_and_seeds(members, seed, says):
 
 
 def test_seeds_loaded_by_dbt_are_the_generator_s_tables(tmp_path):
-    """The default demo reads the committed seeds, any other one generated tables: the same, types included."""
+    """The default demo reads the committed seeds, any other generated tables: the same, types included."""
     printed = run("demo", "--folder", tmp_path)
     assert printed.exit_code == 0, printed.output
     assert all(words in printed.output for words in ("3,000 members", "not reached", "not yet observable"))
