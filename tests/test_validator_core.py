@@ -823,6 +823,16 @@ def test_intervals_observation_in_months_and_hours():
     assert faults(faulty) == [("b", day(1), "ended_before_observation")]
 
 
+def test_intervals_known_only_before_observation_were_never_observed():
+    # Knowledge stops on the 21st, observation begins on the 25th.
+    sound, faulty = intervals([("a", day(1), None), ("b", day(29), None)], grace=10, observe_from=day(25))
+    assert sound == []
+    assert faults(faulty) == [
+        ("a", day(1), "ended_before_observation"),
+        ("b", day(29), "starts_within_grace"),
+    ]
+
+
 def test_intervals_without_as_of_stop_at_the_start_of_today():
     (row,), _ = intervals([("a", day(1), None)], as_of=None)
     assert abs(row["last_seen_at"] - date.today()) <= timedelta(days=1)

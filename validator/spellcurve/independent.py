@@ -10,7 +10,8 @@ What lifelines vouches for (see ``IndependentCurve.columns``):
   alone, since it rounds the number at risk down in the variance.
 - cumulative_hazard: its Nelson-Aalen sum, with ties taken together (no smoothing).
 
-What it does not vouch for, left None: std_error (it keeps that figure to itself), other bounds, and cumulative_hazard_std_error (it uses the binomial variance d (n - d) / n³ where ours is d / n²). Where
+What it does not vouch for, left None: std_error (it keeps that figure to itself), all other bounds, and
+cumulative_hazard_std_error (it uses the binomial variance d (n - d) / n³ where ours is d / n²). Where
 survival falls to 0 while later spells are still to enter, it refuses to fit a curve: then it vouches for the
 counts and the cumulative hazard alone.
 

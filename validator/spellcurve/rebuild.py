@@ -4,7 +4,9 @@ Every builder takes its source rows as dicts and returns two lists of dicts: the
 rows that were refused. Each source row is in exactly one of the two.
 
 Where the rules leave a choice open, the choice taken here is: rows that tie on everything the rules order by
-keep the order of the input; among several causes that tie, null yields to text; a null sequence comes last.
+keep the order of the input; among several causes that tie, null yields to text; a null sequence comes last; a
+censored spell whose last known moment lies before observe_from was never under observation, and is refused like
+one that ended there.
 """
 
 from __future__ import annotations
@@ -68,7 +70,7 @@ FAULTS = {
     "unreadable_weight": "The weight is no number; correct it in the source.",
     "weight_not_positive": "The weight is not above 0; correct it in the source.",
     "starts_within_grace": "The spell starts too close to as_of for its end to be known for certain.",
-    "ended_before_observation": "The spell ended before observe_from, when ended spells were not recorded.",
+    "ended_before_observation": "The spell was last seen before observe_from, so it was never under observation.",
 }
 
 
@@ -278,7 +280,7 @@ class _Ledger:
         duration = completed_units(spell.start, last_seen, rules.unit)
         entry = 0
         if rules.observe_from is not None and spell.start < rules.observe_from:
-            entry = min(completed_units(spell.start, rules.observe_from, rules.unit), duration)
+            entry = completed_units(spell.start, rules.observe_from, rules.unit)
         values = (
             spell.subject,
             number,
@@ -393,7 +395,7 @@ def _finish(spells: Iterable[_Piece], cut: datetime, ledger: _Ledger) -> None:
             fault = None
             if spell.start > cut:
                 fault = "starts_within_grace"
-            elif not censored and rules.observe_from and rules.before(last_seen, rules.observe_from):
+            elif rules.observe_from and rules.before(last_seen, rules.observe_from):
                 fault = "ended_before_observation"
             if fault:
                 for source in spell.sources:
