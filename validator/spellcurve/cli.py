@@ -44,7 +44,9 @@ def _show_version(asked: bool) -> None:
 def spellcurve(
     version: Annotated[
         bool,
-        typer.Option("--version", callback=_show_version, is_eager=True, help="Show the version and stop."),
+        typer.Option(
+            "--version", metavar="", callback=_show_version, is_eager=True, help="Show the version and stop."
+        ),
     ] = False,
 ) -> None:
     """Prove that the time-to-event figures in a warehouse are right.
@@ -56,19 +58,29 @@ def spellcurve(
 @app.command()
 def demo(
     folder: Annotated[
-        Path, typer.Option(help="Where to put the database, dbt's logs and everything else the demo writes.")
+        Path,
+        typer.Option(
+            metavar="PATH", help="Where to put the database, dbt's logs and everything else the demo writes."
+        ),
     ] = Path("spellcurve-demo"),
     members: Annotated[
         int,
-        typer.Option(min=FEWEST_MEMBERS, max=MOST_MEMBERS, help="How many members the invented library has."),
+        typer.Option(
+            metavar="NUMBER",
+            min=FEWEST_MEMBERS,
+            max=MOST_MEMBERS,
+            help=f"How many members the library has, from {FEWEST_MEMBERS:,} to {MOST_MEMBERS:,}.",
+        ),
     ] = DEFAULT_MEMBERS,
     seed: Annotated[
-        int, typer.Option(min=0, help="Another seed invents another library of the same kind.")
+        int,
+        typer.Option(metavar="NUMBER", min=0, help="Another seed invents another library of the same kind."),
     ] = DEFAULT_SEED,
     check_only: Annotated[
         bool,
         typer.Option(
             "--check-only",
+            metavar="",
             help="Build nothing; check and show the tables that an earlier run left in the folder.",
         ),
     ] = False,

@@ -142,9 +142,14 @@ class CheckedCurve:
         return (self.exact, *self.independent)
 
     @property
-    def agrees(self) -> bool:
-        """Whether every figure agrees."""
-        return all(comparison.agrees for comparison in self.comparisons)
+    def wrong(self) -> list[str]:
+        """A sentence about every figure that is wrong, once even where both ways say so."""
+        sentences: dict[tuple[Any, ...], str] = {}
+        for comparison in self.comparisons:
+            for one in comparison.disagreements:
+                place = (one.kind, one.group, one.duration, one.column)
+                sentences.setdefault(place, one.sentence)
+        return list(sentences.values())
 
 
 @dataclass(frozen=True)
@@ -166,12 +171,8 @@ class DemoResult:
 
     @property
     def disagreements(self) -> dict[str, list[str]]:
-        """Sentences about every figure that is wrong, by curve; curves without any are left out."""
-        found = {
-            curve.model: [str(one) for comparison in curve.comparisons for one in comparison.disagreements]
-            for curve in self.checked
-        }
-        return {model: sentences for model, sentences in found.items() if sentences}
+        """A sentence about every figure that is wrong, by curve; curves without any are left out."""
+        return {curve.model: curve.wrong for curve in self.checked if curve.wrong}
 
     @property
     def largest_difference(self) -> float:
@@ -265,7 +266,13 @@ class _Demo:
             ) from error
 
     def _write_profile(self) -> None:
-        output = {"type": "duckdb", "path": str(self.database), "schema": SCHEMA, "threads": 2}
+        output = {
+            "type": "duckdb",
+            "path": str(self.database),
+            "schema": SCHEMA,
+            "threads": 2,
+            "settings": {"enable_progress_bar": False},
+        }
         profile = {"spellcurve": {"target": "demo", "outputs": {"demo": output}}}
         text = f"{_MARK}\n{json.dumps(profile, indent=2)}\n"
         (self.folder / "profiles.yml").write_text(text, encoding="utf-8")
@@ -331,7 +338,9 @@ class _Demo:
 
     def _connect(self) -> duckdb.DuckDBPyConnection:
         try:
-            return duckdb.connect(str(self.database))
+            connection = duckdb.connect(str(self.database))
+            connection.execute("set enable_progress_bar = false")
+            return connection
         except duckdb.Error as error:
             raise DemoError(
                 f"{self.database} cannot be opened; close the program that has it open, or give another "

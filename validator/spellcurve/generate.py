@@ -15,7 +15,7 @@ from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass
 from datetime import date, timedelta
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import pandas as pd
@@ -252,7 +252,8 @@ class _Untidy:
 
 def _named(codes: Ints, names: Sequence[str]) -> pd.Categorical:
     """Text by position; -1 is null."""
-    return pd.Categorical.from_codes(codes.astype(np.int64), categories=list(names))
+    positions: Any = codes.astype(np.int64)
+    return pd.Categorical.from_codes(positions, categories=pd.Index(list(names)))
 
 
 _DAY = "strftime(date '1970-01-01' + cast({0} as integer), '%Y-%m-%d')"
