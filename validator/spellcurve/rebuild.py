@@ -4,9 +4,9 @@ Every builder takes its source rows as dicts and returns two lists of dicts: the
 rows that were refused. Each source row is in exactly one of the two.
 
 Where the rules leave a choice open, the choice taken here is: rows that tie on everything the rules order by
-keep the order of the input; among several causes that tie, null yields to text; a null sequence comes last; a
-censored spell whose last known moment lies before observe_from was never under observation, and is refused like
-one that ended there.
+keep the order of the input; among several causes that tie, null yields to text; a null sequence comes last;
+a censored spell whose last known moment lies before observe_from was never under observation, and is refused
+like one that ended there.
 """
 
 from __future__ import annotations
@@ -70,7 +70,7 @@ FAULTS = {
     "unreadable_weight": "The weight is no number; correct it in the source.",
     "weight_not_positive": "The weight is not above 0; correct it in the source.",
     "starts_within_grace": "The spell starts too close to as_of for its end to be known for certain.",
-    "ended_before_observation": "The spell was last seen before observe_from, so it was never under observation.",
+    "ended_before_observation": "The spell was last seen before observe_from, so it was never observed.",
 }
 
 
