@@ -68,10 +68,11 @@ class Engine:
         arguments = ["compile", "--quiet", "--project-dir", str(ROOT), "--target", self.name, "--inline", inline]
         for option, place in places.items():
             arguments += [option, str(place)]
+        said: list[str] = []
         with redirect_stdout(StringIO()):
-            outcome = dbtRunner().invoke(arguments)
+            outcome = dbtRunner(callbacks=[lambda event: said.append(event.info.msg)]).invoke(arguments)
         if not outcome.success:
-            raise CompilationError(str(outcome.exception))
+            raise CompilationError("\n".join([str(outcome.exception), *said]))
         return outcome.result.results[0].node.compiled_code
 
     def load(self, table: str, columns: dict[str, str], rows: Iterable[dict[str, Any]]) -> None:

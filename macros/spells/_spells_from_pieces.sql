@@ -27,7 +27,7 @@ pieces_as_known as (
     select
         subject_id, started, supplement, fault, {{ spellcurve._each_then_comma(extra) -}}
         case when ended > {{ o.as_of_sql }} then {{ never }} else coalesce(ended, {{ never }}) end as ended,
-        coalesce(cause, '{{ 'unknown' if has_cause else 'event' }}') as cause
+        cause
         {{- spellcurve._carried(o) }}{{ spellcurve._raw(o) }}
     from pieces
     {{ spellcurve._without_refused(o) }}
@@ -115,6 +115,7 @@ spells_as_seen as (
     select
         *,
         {{ cut }} as cut,
+        coalesce(spell_cause, '{{ 'unknown' if has_cause else 'event' }}') as known_cause,
         case when spell_ended <= {{ cut }} then 1 else 0 end as event,
         case when spell_ended <= {{ cut }} then spell_ended else {{ cut }} end as last_seen
     from spells_with_rows
@@ -136,7 +137,7 @@ spells_as_seen as (
 {%- endif %}
 spells_judged as (
     select
-        subject_id, started, supplement, is_first, spell_started, last_seen, event, spell_cause, source_rows
+        subject_id, started, supplement, is_first, spell_started, last_seen, event, known_cause, source_rows
         {{- spellcurve._carried(o) }}
         {%- if o.rows == 'faulty' %}, raw_start, raw_end, raw_kind{% endif %},
         {{ spellcurve._first_fault(whole_spell_faults, o, so_far=true) | indent(8) }}
@@ -156,7 +157,7 @@ where fault is not null
 {%- else %}
 select
     subject_id,
-    {{ spellcurve._integer('row_number() over (partition by subject_id order by spell_started, last_seen, event, spell_cause)') }}
+    {{ spellcurve._integer('row_number() over (partition by subject_id order by spell_started, last_seen, event, known_cause)') }}
         as spell_number,
     {{ spellcurve._date('spell_started') if o.by_day else 'spell_started' }} as started_at,
     {{ spellcurve._date('last_seen') if o.by_day else 'last_seen' }} as last_seen_at,
@@ -170,7 +171,7 @@ select
     {%- endif %}
     {{ spellcurve._completed_units('spell_started', 'last_seen', o.unit) }} as duration,
     {{ spellcurve._integer('event') }} as event,
-    case when event = 1 then spell_cause end as cause,
+    case when event = 1 then known_cause end as cause,
     {{ spellcurve._integer('1') }} as weight
     {%- if o.source_rows %},
     {{ spellcurve._integer('source_rows') }} as source_rows

@@ -86,7 +86,7 @@ events_read as (
         {{ spellcurve._column(event_subject) }} as subject_id,
         {{ spellcurve._column(event_at) }} as raw_start,
         {{ spellcurve._read_moment(spellcurve._column(event_at)) }} as moment,
-        {{ 'coalesce(' ~ spellcurve._as_text(spellcurve._column(cause)) ~ ", 'unknown')" if cause else "'event'" }} as cause
+        {{ spellcurve._as_text(spellcurve._column(cause) if cause else 'null') }} as cause
     from {{ events }}
 ),
 
@@ -127,7 +127,7 @@ numbered_timeline as (
             partition by subject_id{{ apart }} order by moment, is_origin desc rows between unbounded preceding and current row
         ) as last_origin,
         sum(1 - is_origin) over (
-            partition by subject_id{{ apart }} order by moment desc, is_origin, cause desc
+            partition by subject_id{{ apart }} order by moment desc, is_origin, case when cause is null then 0 else 1 end, cause desc
             rows between unbounded preceding and current row
         ) as events_to_come
     from timeline
