@@ -125,8 +125,8 @@ take turns, and a ratio is the median over the rounds of the ratio within a roun
 
 Seconds are medians. Ratios are to the bare aggregation with sum(weight), per spell.
 
-Target: survival_curve at no more than {target} times the bare aggregation. This run: {ratio:.2f} by the clock, {work:.2f}
-by the processor, which is the steadier of the two on a machine with other work to do.
+Target: survival_curve at no more than {target} times the bare aggregation. This run: {ratio:.2f} by the
+clock, {work:.2f} by the processor, which is the steadier of the two on a machine with other work to do.
 
 Largest difference in survival from lifelines, over all groups and durations: {difference:.1e}.
 
