@@ -243,7 +243,9 @@ def test_a_lost_source_row_gives_exit_status_1_through_the_tests(copied):
     assert "every_row_accounted_for" in printed.output
 
 
-def test_an_untouched_copy_still_agrees(copied):
+def test_an_untouched_copy_still_agrees_whatever_the_user_s_own_dbt_settings(copied, monkeypatch):
+    for name, value in {"DBT_WARN_ERROR": "true", "DBT_TARGET": "nowhere", "DBT_FAIL_FAST": "true"}.items():
+        monkeypatch.setenv(name, value)
     assert run("demo", "--folder", copied, "--check-only").exit_code == 0
 
 

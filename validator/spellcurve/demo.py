@@ -3,9 +3,10 @@
 from __future__ import annotations
 
 import json
+import os
 import shutil
-from collections.abc import Callable, Mapping, Sequence
-from contextlib import AbstractContextManager, nullcontext
+from collections.abc import Callable, Iterator, Mapping, Sequence
+from contextlib import AbstractContextManager, contextmanager, nullcontext
 from dataclasses import dataclass
 from datetime import date, timedelta
 from pathlib import Path
@@ -61,8 +62,8 @@ class Question:
 QUESTIONS = (
     Question(
         "How long do members stay?",
-        "A spell is a stretch of membership. A break of up to 30 days does not end it, so an end is only\n"
-        "certain 30 days later. Those who joined before July 2020 are known from paper records, and\n"
+        "A spell is a stretch of membership. A break of up to 30 days does not end it, so an end is only "
+        "certain 30 days later. Those who joined before July 2020 are known from paper records, and "
         "count only from then on: nobody wrote down who had left before.",
         "days",
         "still members after",
@@ -237,6 +238,16 @@ def find_project() -> Path:
     )
 
 
+@contextmanager
+def _own_settings_only() -> Iterator[None]:
+    """Keeps the user's settings of dbt (environment variables such as DBT_WARN_ERROR) out of the demo."""
+    kept = {name: os.environ.pop(name) for name in list(os.environ) if name.startswith("DBT_")}
+    try:
+        yield
+    finally:
+        os.environ.update(kept)
+
+
 class _Demo:
     """The demo in one folder."""
 
@@ -303,24 +314,25 @@ class _Demo:
         Raises:
             DemoError: dbt could not do it. Tests that fail are results, not errors.
         """
-        done = dbtRunner().invoke(
-            [
-                "--log-level", "none",
-                "--log-level-file", "debug",
-                "--no-send-anonymous-usage-stats",
-                "--no-use-colors",
-                "--no-use-colors-file",
-                command,
-                *arguments,
-                "--project-dir", str(self.project),
-                "--profiles-dir", str(self.folder),
-                "--profile", "spellcurve",
-                "--target", "demo",
-                "--target-path", str(self.folder / "target"),
-                "--log-path", str(self.folder / "logs"),
-                "--vars", json.dumps({"spellcurve_demo": True}),
-            ]
-        )  # fmt: skip
+        with _own_settings_only():
+            done = dbtRunner().invoke(
+                [
+                    "--log-level", "none",
+                    "--log-level-file", "debug",
+                    "--no-send-anonymous-usage-stats",
+                    "--no-use-colors",
+                    "--no-use-colors-file",
+                    command,
+                    *arguments,
+                    "--project-dir", str(self.project),
+                    "--profiles-dir", str(self.folder),
+                    "--profile", "spellcurve",
+                    "--target", "demo",
+                    "--target-path", str(self.folder / "target"),
+                    "--log-path", str(self.folder / "logs"),
+                    "--vars", json.dumps({"spellcurve_demo": True}),
+                ]
+            )  # fmt: skip
         results: Sequence[Any] = getattr(done.result, "results", None) or []
         broken = [result for result in results if result.status not in ("success", "pass", "fail", "warn")]
         if done.exception is not None or broken or not results:
