@@ -32,12 +32,13 @@ test: lint pytest ## Lint, then run every test
 pytest: $(READY)
 	$(BIN)/python -m pytest $(PYTEST_ARGS)
 
-lint: $(READY) ## Check the style of the Python code and of the SQL
+lint: $(READY) ## Check the Python code with ruff and mypy, and the compiled SQL with sqlfluff
 	$(BIN)/ruff check .
+	$(BIN)/mypy
 	rm -rf $(COMPILED)
 	$(BIN)/dbt --quiet compile --no-introspect --no-populate-cache --profiles-dir .ci --target-path $(COMPILED) \
 	    --vars '{spellcurve_demo: true}' --exclude resource_type:test
-	$(BIN)/sqlfluff lint --disable-progress-bar --processes 2 $(COMPILED)/compiled
+	$(BIN)/sqlfluff lint --disable-progress-bar $(COMPILED)/compiled
 
 bench: $(READY) ## Measure survival_curve on ten million spells and write benchmarks/results.md
 	$(BIN)/python benchmarks/survival_curve.py
