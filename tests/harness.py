@@ -7,6 +7,7 @@ from collections.abc import Iterable, Sequence
 from contextlib import redirect_stdout
 from functools import cached_property
 from io import StringIO
+from itertools import chain
 from pathlib import Path
 from typing import Any
 
@@ -81,8 +82,8 @@ class Engine:
         self.connection.execute(f'create or replace table "{table}" ({declared})')
         values = [[row.get(name) for name in columns] for row in rows]
         if values:
-            marks = ", ".join("?" for _ in columns)
-            self.connection.executemany(f'insert into "{table}" values ({marks})', values)
+            marks = ", ".join(["(" + ", ".join("?" for _ in columns) + ")"] * len(values))
+            self.connection.execute(f'insert into "{table}" values {marks}', list(chain.from_iterable(values)))
 
     def query(self, sql: str) -> list[dict[str, Any]]:
         cursor = self.connection.execute(sql)
@@ -91,3 +92,7 @@ class Engine:
 
     def run(self, call: str) -> list[dict[str, Any]]:
         return self.query(self.render(call))
+
+    def make(self, table: str, call: str) -> None:
+        """Makes `table` anew from the rows of a macro call, as a model would."""
+        self.connection.execute(f'create or replace table "{table}" as {self.render(call)}')

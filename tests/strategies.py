@@ -33,8 +33,9 @@ def spell_rows(draw, fractional: bool = False, largest: int = 12, most: int = 40
 # 'today' is 2024-03-31 in these rows: some lie after it, some cannot be read, some are missing.
 AS_OF = "2024-03-31"
 DAYS = ["2023-12-30", "2024-01-30", "2024-01-31", "2024-02-28", "2024-02-29", "2024-03-01", "2024-03-30", AS_OF, "2024-04-02"]
-TIMES = ["", " 00:00:00", " 09:30", "T09:30:00", " 09:30:00.25", " 23:59:59"]
-UNREADABLE = ["2024-02-30", "2023-02-29", "01/02/2024", "soon", ""]
+# No moment is spelt in two ways, so that it does not matter which copy of a row is the duplicate.
+TIMES = ["", " 09:30", "T10:15:00", " 09:30:00.25", " 23:59:59"]
+UNREADABLE = ["2024-02-30", "2023-02-29", "01/02/2024", "2024-01-01 24:00:00", "2024-01-01 09:30.5", "soon", ""]
 SUBJECTS = ["ann", "bob", "é'x\"", "", None]
 
 

@@ -4,6 +4,8 @@ from __future__ import annotations
 
 from collections import Counter
 from datetime import date, datetime
+from itertools import product
+from random import Random
 
 from hypothesis import given, settings
 from hypothesis import strategies as st
@@ -24,25 +26,83 @@ TYPED = RAW | {"began": "moment", "ended": "date", "written_on": "date"}
 UNITS = ["day", "week", "month", "hour", "minute"]
 OBSERVED_FROM = [None, None, "2024-01-31", "2024-02-29 09:30:00"]
 KINDS = ("join", "rejoin", "leave", "lapse", "chat", None)
+STATUSES = ("active", "trial", "paused", "lapsed", None)
 
 
-def as_arguments(options: dict) -> str:
-    return "".join(f", {name}={value!r}" for name, value in options.items() if value is not None)
+def combinations(most: int = 40, **choices: list) -> list[dict]:
+    """Some combinations of options, always the same ones; few, since each is compiled (all of them in one dbt run)."""
+    every = [dict(zip(choices, chosen, strict=True)) for chosen in product(*choices.values())]
+    some = Random(1963).sample(every, min(most, len(every)))
+    return [{name: value for name, value in options.items() if value is not None} for options in some]
+
+
+INTERVALS = combinations(
+    unit=UNITS,
+    observe_from=OBSERVED_FROM,
+    recorded_at=[None, "written_on"],
+    cause=[None, "kind"],
+    grace=[0, 2, 40],
+) + combinations(unit=UNITS, observe_from=OBSERVED_FROM, cause=[None, "kind"], overlaps=["keep", "refuse"], most=20)
+EVENT_LOG = combinations(
+    opens=[["join", "rejoin"]],
+    closes=["leave", ["leave", "lapse"], {"leave": "left", "lapse": "lapsed"}],
+    sequence=[None, "nr"],
+    grace=[0, 30],
+    unit=UNITS,
+    observe_from=OBSERVED_FROM,
+    carry=[["subject_key"]],
+)
+CHANGES = combinations(
+    active=[["active", "trial"]],
+    ended=[None, "ended"],
+    cause=[None, "kind"],
+    sequence=[None, "nr"],
+    grace=[0, 30],
+    unit=UNITS,
+    observe_from=OBSERVED_FROM,
+)
+SNAPSHOTS = combinations(
+    active=[["active", "trial"]],
+    shape=["snapshots"],
+    cause=[None, "kind"],
+    grace=[0, 1, 30],
+    unit=UNITS[:3],
+    observe_from=OBSERVED_FROM,
+)
+ACTIVITY = combinations(
+    lapse_after=[1, 29, 30, 31],
+    ends_at=["silence", "last_activity"],
+    recorded_at=[None, "written_on"],
+    unit=UNITS,
+    observe_from=OBSERVED_FROM,
+)
+FIRST_EVENT = combinations(
+    unit=UNITS, observe_from=OBSERVED_FROM, recorded_at=[None, "written_on"], cause=[None, "kind"]
+)
+DURATIONS = combinations(
+    subject=[None, "subject_key"], entry=[None, "waited"], cause=[None, "why"], weight=[None, "spells"]
+)
+TYPED_INTERVALS = combinations(unit=UNITS, grace=[0, 3])
 
 
 def without_detail(rows: list[dict]) -> Counter:
     return Counter(tuple((name, value) for name, value in row.items() if name != "detail") for row in rows)
 
 
-def check(engine, builder: str, tables: dict, columns: tuple, options: dict, types: dict | None = None) -> None:
+def calls(builder: str, names: tuple[str, ...], options: dict) -> list[str]:
+    arguments = ", ".join([repr(name) for name in names] + [f"{name}={value!r}" for name, value in options.items()])
+    return [f"{builder}({arguments}, rows={rows!r})" for rows in ("sound", "faulty")]
+
+
+def check(engine, builder: str, tables: dict, columns: tuple, options: dict, among: list[dict], types=None, **fixed) -> None:
     """Both kinds of rows equal those of the Python builder, and every source row is in exactly one of them."""
+    fixed = {"carry": ["plan"], "source_rows": True} | fixed
+    names = (*tables, *columns)
+    engine.render_all([call for each in among for call in calls(builder, names, fixed | each)])
     for name, rows in tables.items():
         engine.load(name, types or RAW, rows)
-    options = {"as_of": AS_OF, "carry": ["plan"], "source_rows": True} | options
-    named = ", ".join(repr(name) for name in (*tables, *columns))
-    calls = [f"{builder}({named}{as_arguments(options)}, rows={rows!r})" for rows in ("sound", "faulty")]
-    sound, faulty = (engine.query(sql) for sql in engine.render_all(calls))
-    expected_sound, expected_faulty = getattr(rebuild, builder)(*tables.values(), *columns, **options)
+    sound, faulty = (engine.run(call) for call in calls(builder, names, fixed | options))
+    expected_sound, expected_faulty = getattr(rebuild, builder)(*tables.values(), *columns, **(fixed | options))
     assert without_detail(sound) == without_detail(expected_sound)
     assert without_detail(faulty) == without_detail(expected_faulty)
     assert all(row["detail"] for row in faulty)
@@ -50,98 +110,54 @@ def check(engine, builder: str, tables: dict, columns: tuple, options: dict, typ
     assert sum(row["source_rows"] for row in sound) + len(faulty) == given_rows
 
 
-@given(
-    rows=raw_rows((None, "moved", "cost")),
-    unit=st.sampled_from(UNITS),
-    observe_from=st.sampled_from(OBSERVED_FROM),
-    recorded_at=st.sampled_from([None, "written_on"]),
-    cause=st.sampled_from([None, "kind"]),
-    how=st.sampled_from([("merge", 0), ("merge", 2), ("merge", 40), ("keep", 0), ("refuse", 0)]),
-)
+@given(rows=raw_rows((None, "moved", "cost")), options=st.sampled_from(INTERVALS))
 @settings(max_examples=250)
-def test_intervals(engine, rows, unit, observe_from, recorded_at, cause, how):
-    options = {"unit": unit, "observe_from": observe_from, "recorded_at": recorded_at, "cause": cause}
-    options |= {"overlaps": how[0], "grace": how[1]}
-    check(engine, "spells_from_intervals", {"raw": rows}, ("subject_key", "began", "ended"), options)
+def test_intervals(engine, rows, options):
+    columns = ("subject_key", "began", "ended")
+    check(engine, "spells_from_intervals", {"raw": rows}, columns, options, INTERVALS, as_of=AS_OF)
 
 
-@given(
-    rows=raw_rows(KINDS),
-    unit=st.sampled_from(UNITS),
-    observe_from=st.sampled_from(OBSERVED_FROM),
-    sequence=st.sampled_from([None, "nr"]),
-    closes=st.sampled_from(["leave", ["leave", "lapse"], {"leave": "left", "lapse": "lapsed"}]),
-    grace=st.sampled_from([0, 30]),
-)
+@given(rows=raw_rows(KINDS), options=st.sampled_from(EVENT_LOG))
 @settings(max_examples=250)
-def test_event_log(engine, rows, unit, observe_from, sequence, closes, grace):
-    options = {"opens": ["join", "rejoin"], "closes": closes, "sequence": sequence, "grace": grace}
-    options |= {"unit": unit, "observe_from": observe_from, "carry": ["subject_key"] if sequence else ["plan"]}
-    check(engine, "spells_from_event_log", {"raw": rows}, ("subject_key", "began", "kind"), options)
+def test_event_log(engine, rows, options):
+    columns = ("subject_key", "began", "kind")
+    check(engine, "spells_from_event_log", {"raw": rows}, columns, options, EVENT_LOG, as_of=AS_OF)
 
 
-@given(
-    rows=raw_rows(("active", "trial", "paused", "lapsed", None)),
-    unit=st.sampled_from(UNITS),
-    observe_from=st.sampled_from(OBSERVED_FROM),
-    ended=st.sampled_from([None, "ended"]),
-    cause=st.sampled_from([None, "kind"]),
-    sequence=st.sampled_from([None, "nr"]),
-    grace=st.sampled_from([0, 30]),
-)
+@given(rows=raw_rows(STATUSES), options=st.sampled_from(CHANGES))
 @settings(max_examples=250)
-def test_status_changes(engine, rows, unit, observe_from, ended, cause, sequence, grace):
-    options = {"active": ["active", "trial"], "ended": ended, "cause": cause, "sequence": sequence}
-    options |= {"grace": grace, "unit": unit, "observe_from": observe_from}
-    check(engine, "spells_from_status_history", {"raw": rows}, ("subject_key", "began", "kind"), options)
+def test_status_changes(engine, rows, options):
+    columns = ("subject_key", "began", "kind")
+    check(engine, "spells_from_status_history", {"raw": rows}, columns, options, CHANGES, as_of=AS_OF)
 
 
-@given(
-    rows=raw_rows(("active", "trial", "paused", "lapsed", None)),
-    unit=st.sampled_from(UNITS[:3]),
-    observe_from=st.sampled_from(OBSERVED_FROM),
-    cause=st.sampled_from([None, "kind"]),
-    grace=st.sampled_from([0, 1, 30]),
-)
-@settings(max_examples=200)
-def test_status_snapshots(engine, rows, unit, observe_from, cause, grace):
-    options = {"active": ["active", "trial"], "shape": "snapshots", "cause": cause, "grace": grace}
-    options |= {"unit": unit, "observe_from": observe_from}
-    check(engine, "spells_from_status_history", {"raw": rows}, ("subject_key", "began", "kind"), options)
+@given(rows=raw_rows(STATUSES), options=st.sampled_from(SNAPSHOTS))
+@settings(max_examples=250)
+def test_status_snapshots(engine, rows, options):
+    columns = ("subject_key", "began", "kind")
+    check(engine, "spells_from_status_history", {"raw": rows}, columns, options, SNAPSHOTS, as_of=AS_OF)
 
 
-@given(
-    rows=raw_rows((None,)),
-    unit=st.sampled_from(UNITS),
-    observe_from=st.sampled_from(OBSERVED_FROM),
-    recorded_at=st.sampled_from([None, "written_on"]),
-    lapse_after=st.sampled_from([1, 29, 30, 31]),
-    ends_at=st.sampled_from(["silence", "last_activity"]),
-)
-@settings(max_examples=200)
-def test_activity(engine, rows, unit, observe_from, recorded_at, lapse_after, ends_at):
-    options = {"lapse_after": lapse_after, "ends_at": ends_at, "recorded_at": recorded_at}
-    options |= {"unit": unit, "observe_from": observe_from}
-    check(engine, "spells_from_activity", {"raw": rows}, ("subject_key", "began"), options)
+@given(rows=raw_rows((None,)), options=st.sampled_from(ACTIVITY))
+@settings(max_examples=250)
+def test_activity(engine, rows, options):
+    check(engine, "spells_from_activity", {"raw": rows}, ("subject_key", "began"), options, ACTIVITY, as_of=AS_OF)
 
 
 @given(
     origins=raw_rows((None,), most=6),
     events=raw_rows((None, "loan", "visit", "zither")),
-    unit=st.sampled_from(UNITS),
-    observe_from=st.sampled_from(OBSERVED_FROM),
-    recorded_at=st.sampled_from([None, "written_on"]),
-    cause=st.sampled_from([None, "kind"]),
+    options=st.sampled_from(FIRST_EVENT),
 )
 @settings(max_examples=250)
-def test_first_event(engine, origins, events, unit, observe_from, recorded_at, cause):
-    options = {"unit": unit, "observe_from": observe_from, "recorded_at": recorded_at, "cause": cause}
+def test_first_event(engine, origins, events, options):
     tables = {"raw_origins": origins, "raw_events": events}
-    check(engine, "spells_to_first_event", tables, ("subject_key", "began", "began"), options)
+    columns = ("subject_key", "began", "began")
+    check(engine, "spells_to_first_event", tables, columns, options, FIRST_EVENT, as_of=AS_OF)
 
 
 NUMBERS = ["0", "1", "3", "7", "7.0", "2.5", "-1", "", "many", "1e1", "nan", None]
-LENGTHS = {"subject_key": "text", "months": "text", "waited": "text", "left": "text", "why": "text", "spells": "text", "plan": "text"}
+LENGTHS = dict.fromkeys(["subject_key", "months", "waited", "left", "why", "spells", "plan"], "text")
 
 
 @given(
@@ -159,22 +175,11 @@ LENGTHS = {"subject_key": "text", "months": "text", "waited": "text", "left": "t
         ),
         max_size=12,
     ),
-    subject=st.sampled_from([None, "subject_key"]),
-    entry=st.sampled_from([None, "waited"]),
-    cause=st.sampled_from([None, "why"]),
-    weight=st.sampled_from([None, "spells"]),
+    options=st.sampled_from(DURATIONS),
 )
 @settings(max_examples=250)
-def test_durations(engine, rows, subject, entry, cause, weight):
-    options = {"as_of": None, "subject": subject, "entry": entry, "cause": cause, "weight": weight}
-    engine.load("raw", LENGTHS, rows)
-    options = {name: value for name, value in options.items() if value is not None}
-    options |= {"carry": ["plan"], "source_rows": True}
-    call = f"spells_from_durations('raw', 'months', 'left'{as_arguments(options)}"
-    sound, faulty = (engine.query(sql) for sql in engine.render_all([f"{call}, rows='{kind}')" for kind in ("sound", "faulty")]))
-    expected_sound, expected_faulty = rebuild.spells_from_durations(rows, "months", "left", **options)
-    assert without_detail(sound) == without_detail(expected_sound)
-    assert without_detail(faulty) == without_detail(expected_faulty)
+def test_durations(engine, rows, options):
+    check(engine, "spells_from_durations", {"raw": rows}, ("months", "left"), options, DURATIONS, LENGTHS)
 
 
 @given(
@@ -189,10 +194,9 @@ def test_durations(engine, rows, subject, entry, cause, weight):
         ),
         max_size=10,
     ),
-    unit=st.sampled_from(UNITS),
-    grace=st.sampled_from([0, 3]),
+    options=st.sampled_from(TYPED_INTERVALS),
 )
 @settings(max_examples=150)
-def test_dates_and_timestamps_together(engine, rows, unit, grace):
+def test_dates_and_timestamps_together(engine, rows, options):
     columns = ("subject_key", "began", "ended")
-    check(engine, "spells_from_intervals", {"raw": rows}, columns, {"unit": unit, "grace": grace}, types=TYPED)
+    check(engine, "spells_from_intervals", {"raw": rows}, columns, options, TYPED_INTERVALS, TYPED, as_of=AS_OF)

@@ -16,7 +16,9 @@
         {%- set entry, duration = 'entry', 'duration' -%}
     {%- else -%}
         {%- set entry = 'least(entry, ' ~ (horizon + 1) ~ ')' -%}
-        {%- set duration = 'least(duration, ' ~ (horizon + 1) ~ ')' -%}
+        {#- beyond the horizon only two things matter: that the spell was still there, and whether it was ever at risk -#}
+        {%- set duration = 'case when duration <= ' ~ horizon ~ ' then duration when entry < duration then ' ~ (horizon + 2)
+            ~ ' else ' ~ (horizon + 1) ~ ' end' -%}
     {%- endif -%}
 outcomes as (
     select

@@ -38,7 +38,7 @@ pieces_in_order as (
         *,
         row_number() over (
             partition by subject_id{{ apart }} order by started, supplement, ended, cause
-        ) as position
+        ) as place_in_order
     from pieces_as_known
 ),
 
@@ -46,7 +46,7 @@ reached_before as (
     select
         *,
         max(ended) over (
-            partition by subject_id{{ apart }} order by position rows between unbounded preceding and 1 preceding
+            partition by subject_id{{ apart }} order by place_in_order rows between unbounded preceding and 1 preceding
         ) as reached
     from pieces_in_order
 ),
@@ -66,7 +66,7 @@ pieces_by_spell as (
     select
         *,
         sum(is_first) over (
-            partition by subject_id{{ apart }} order by position rows between unbounded preceding and current row
+            partition by subject_id{{ apart }} order by place_in_order rows between unbounded preceding and current row
         ) as spell_key
     from first_pieces
 ),
@@ -131,8 +131,8 @@ spells_as_seen as (
     {%- set observe_from = spellcurve._moment_literal(o.observe_from) -%}
     {%- do whole_spell_faults.append([
         'ended_before_observation',
-        'event = 1 and ' ~ spellcurve._is_before('spell_ended', observe_from, o),
-        spellcurve._detail('end', 'spell_ended', 'is before observe_from ' ~ o.observe_from)
+        spellcurve._is_before('last_seen', observe_from, o),
+        spellcurve._detail('last seen', 'last_seen', 'is before observe_from ' ~ o.observe_from)
     ]) -%}
 {%- endif %}
 spells_judged as (

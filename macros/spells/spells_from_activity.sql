@@ -32,6 +32,10 @@
         ['after_as_of', 'moment > ' ~ o.as_of_sql, spellcurve._detail(happened, 'raw_start', 'is after as_of ' ~ o.as_of)]
     ] -%}
 
+    {#- where days are counted, it is the beginning of a day that makes the silence long enough -#}
+    {%- set counted_from = 'cast(' ~ spellcurve._date('moment') ~ ' as ' ~ spellcurve._moment_type() ~ ')' if o.by_day else 'moment' -%}
+    {%- set lapse = spellcurve._moment_plus(counted_from, lapse_after, o.clock) -%}
+
     {%- set ctes -%}
 source_rows_read as (
     select
@@ -48,7 +52,7 @@ pieces as (
     select
         subject_id,
         moment as started,
-        {{ spellcurve._moment_plus('moment', lapse_after, o.clock) if ends_at == 'silence' else 'moment' }} as ended,
+        {{ lapse if ends_at == 'silence' else 'moment' }} as ended,
         {{ spellcurve._as_text('null') }} as cause,
         0 as supplement{{ spellcurve._carried(o) }}
         {%- if o.rows == 'faulty' %}, raw_start, null as raw_end, null as raw_kind{% endif %},

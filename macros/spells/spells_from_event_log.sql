@@ -107,7 +107,7 @@ moments_with_sides as (
                 <> max(is_open) over (partition by subject_id{{ apart }}, {{ in_order[:-2] }}) then 1
             else 0
         end as is_mixed,
-        row_number() over (partition by subject_id{{ apart }} order by {{ in_order }}kind) as position
+        row_number() over (partition by subject_id{{ apart }} order by {{ in_order }}kind) as place_in_order
     from single_rows
     {{ spellcurve._without_refused(o) }}
 ),
@@ -116,8 +116,8 @@ moments_with_sides as (
 states_before as (
     select
         *,
-        coalesce(mod(max(case when is_mixed = 0 then 2 * position + is_open end) over (
-            partition by subject_id{{ apart }} order by position rows between unbounded preceding and 1 preceding
+        coalesce(mod(max(case when is_mixed = 0 then 2 * place_in_order + is_open end) over (
+            partition by subject_id{{ apart }} order by place_in_order rows between unbounded preceding and 1 preceding
         ), 2), 0) as was_open
     from moments_with_sides
 ),

@@ -75,13 +75,14 @@ rows_judged as (
 ),
 
 {% set apart = spellcurve._apart_from_refused(o) -%}
-{%- set ended_or_never = 'coalesce(ended, ' ~ spellcurve._never() ~ ')' -%}
+{%- set never = spellcurve._never() -%}
+{%- set ended_or_never = 'case when ended > ' ~ o.as_of_sql ~ ' then ' ~ never ~ ' else coalesce(ended, ' ~ never ~ ') end' -%}
 rows_in_order as (
     select
         *,
         row_number() over (
             partition by subject_id{{ apart }} order by started, {{ ended_or_never }}, cause
-        ) as position,
+        ) as place_in_order,
         row_number() over (
             partition by subject_id{{ apart }}, started, {{ ended_or_never }} order by cause
         ) as copy_number
@@ -93,7 +94,7 @@ rows_with_reach as (
     select
         *,
         max({{ ended_or_never }}) over (
-            partition by subject_id{{ apart }} order by position rows between unbounded preceding and 1 preceding
+            partition by subject_id{{ apart }} order by place_in_order rows between unbounded preceding and 1 preceding
         ) as reached
     from rows_in_order
 ),

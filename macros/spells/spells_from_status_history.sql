@@ -46,7 +46,7 @@
         ['no_subject', 'subject_id is null', spellcurve._text(subject ~ ' is null')],
         ['no_time', 'raw_start is null', spellcurve._text(effective ~ ' is null')],
         ['unreadable_time', 'moment is null', spellcurve._detail(effective, 'raw_start', 'is not a date or a time')],
-        ['after_as_of', 'moment > ' ~ o.as_of_sql, spellcurve._detail(effective, 'raw_start', 'is after as_of ' ~ o.as_of)],
+        ['after_as_of', ('time_read' if by_snapshot else 'moment') ~ ' > ' ~ o.as_of_sql, spellcurve._detail(effective, 'raw_start', 'is after as_of ' ~ o.as_of)],
         ['no_status', 'status is null', spellcurve._text(status ~ ' is null')]
     ] -%}
     {%- if ended is not none -%}
@@ -153,7 +153,7 @@ rows_agreed as (
 rows_in_order as (
     select
         *,
-        row_number() over (partition by subject_id{{ apart }} order by {{ in_order }}cause) as position
+        row_number() over (partition by subject_id{{ apart }} order by {{ in_order }}cause) as place_in_order
     from rows_agreed
     {{ spellcurve._without_refused(o) }}
 ),
@@ -161,11 +161,11 @@ rows_in_order as (
 rows_with_neighbours as (
     select
         *,
-        lead(moment) over (partition by subject_id{{ apart }} order by position) as next_moment,
-        lead(is_active) over (partition by subject_id{{ apart }} order by position) as next_is_active,
-        lead(cause) over (partition by subject_id{{ apart }} order by position) as next_cause,
+        lead(moment) over (partition by subject_id{{ apart }} order by place_in_order) as next_moment,
+        lead(is_active) over (partition by subject_id{{ apart }} order by place_in_order) as next_is_active,
+        lead(cause) over (partition by subject_id{{ apart }} order by place_in_order) as next_cause,
         max(case when is_active = 1 then moment end) over (
-            partition by subject_id{{ apart }} order by position rows between unbounded preceding and current row
+            partition by subject_id{{ apart }} order by place_in_order rows between unbounded preceding and current row
         ) as last_active
     from rows_in_order
 ),

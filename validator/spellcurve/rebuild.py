@@ -77,7 +77,7 @@ FAULTS = {
 # Values as sources keep them
 
 
-_MOMENT = re.compile(r"([0-9]{4}-[0-9]{2}-[0-9]{2})(?:[ T]([0-9]{2}:[0-9]{2}:[0-9]{2})(?:\.([0-9]{1,6}))?)?")
+_MOMENT = re.compile(r"([0-9]{4}-[0-9]{2}-[0-9]{2})(?:[ T]([0-9]{2}:[0-9]{2})(?:(:[0-9]{2})(?:\.([0-9]{1,6}))?)?)?")
 _NUMBER = re.compile(r" *[+-]?([0-9]+(\.[0-9]*)?|\.[0-9]+)([eE][+-]?[0-9]+)? *")
 _TRUE, _FALSE = ("1", "true", "t"), ("0", "false", "f")
 
@@ -87,7 +87,7 @@ def read_moment(value: Any) -> datetime | None:
 
     Raises:
         ValueError: the value is neither a date, a timestamp without zone, nor text of the form
-            ``YYYY-MM-DD`` or ``YYYY-MM-DD HH:MM:SS[.ffffff]`` (a ``T`` may stand for the space).
+            ``YYYY-MM-DD`` or ``YYYY-MM-DD HH:MM[:SS[.ffffff]]`` (a ``T`` may stand for the space).
     """
     if value is None:
         return None
@@ -97,8 +97,8 @@ def read_moment(value: Any) -> datetime | None:
         return datetime(value.year, value.month, value.day)
     match = _MOMENT.fullmatch(value) if isinstance(value, str) else None
     if match:
-        day, time, fraction = match.groups(default="")
-        return datetime.fromisoformat(f"{day}T{time or '00:00:00'}.{fraction:0<6}")
+        day, minute, second, fraction = match.groups(default="")
+        return datetime.fromisoformat(f"{day}T{minute or '00:00'}{second or ':00'}.{fraction:0<6}")
     raise ValueError(f"{value!r} is no date or timestamp; write YYYY-MM-DD or YYYY-MM-DD HH:MM:SS.")
 
 
@@ -184,6 +184,10 @@ class _Rules:
 
     def gap(self, end: datetime, start: datetime) -> timedelta:
         return start.date() - end.date() if self.day_based else start - end
+
+    def counted_from(self, moment: datetime) -> datetime:
+        """Where counting begins: at the start of the day where days are counted."""
+        return datetime.combine(moment.date(), datetime.min.time()) if self.day_based else moment
 
     def cause(self, given: str | None) -> str:
         return self.unnamed_cause if given is None else given
@@ -726,7 +730,7 @@ def spells_from_activity(
             moment = _moment(source.given_start)
             if last is None or rules.gap(last, moment) >= lapse:
                 spells.append(_Piece(source.subject, moment, None, None, []))
-            spells[-1].end = moment + lapse if ends_at == "silence" else moment
+            spells[-1].end = rules.counted_from(moment) + lapse if ends_at == "silence" else moment
             spells[-1].sources.append(source)
             last = moment
     _finish(spells, rules.as_of if ends_at == "silence" else rules.as_of - lapse, ledger)
