@@ -130,7 +130,8 @@ moments_compared as (
     select
         *,
         min(is_active) over (partition by subject_id{{ apart }}, {{ in_order[:-2] }}) as least_active,
-        max(is_active) over (partition by subject_id{{ apart }}, {{ in_order[:-2] }}) as most_active
+        max(is_active) over (partition by subject_id{{ apart }}, {{ in_order[:-2] }}) as most_active,
+        min(cause) over (partition by subject_id{{ apart }}, {{ in_order[:-2] }}) as cause_of_moment
     from {{ 'rows_on_calendar' if by_snapshot else 'rows_judged' }}
     {{ spellcurve._without_refused(o) }}
 ),
@@ -138,7 +139,7 @@ moments_compared as (
 {% set more = (['own_end'] if ended is not none else []) + (['next_day', 'last_day'] if by_snapshot else []) -%}
 rows_agreed as (
     select
-        subject_id, {{ in_order }}cause, is_active
+        subject_id, {{ in_order }}cause_of_moment, is_active
         {%- for name in more %}, {{ name }}{% endfor %}{{ spellcurve._carried(o) }}
         {%- if o.rows == 'faulty' %}, raw_start, raw_end, raw_kind{% endif %},
         {{ spellcurve._first_fault([
@@ -150,24 +151,43 @@ rows_agreed as (
     from moments_compared
 ),
 
+moments_counted as (
+    select
+        *,
+        row_number() over (partition by subject_id{{ apart }}, {{ in_order[:-2] }} order by cause_of_moment) as copy_number,
+        count(*) over (partition by subject_id{{ apart }}, {{ in_order[:-2] }}) as copies
+    from rows_agreed
+    {{ spellcurve._without_refused(o) }}
+),
+
 rows_in_order as (
     select
         *,
-        row_number() over (partition by subject_id{{ apart }} order by {{ in_order }}cause) as place_in_order
-    from rows_agreed
-    {{ spellcurve._without_refused(o) }}
+        row_number() over (partition by subject_id{{ apart }} order by {{ in_order }}copy_number) as place_in_order
+    from moments_counted
 ),
 
 rows_with_neighbours as (
     select
         *,
-        lead(moment) over (partition by subject_id{{ apart }} order by place_in_order) as next_moment,
-        lead(is_active) over (partition by subject_id{{ apart }} order by place_in_order) as next_is_active,
-        lead(cause) over (partition by subject_id{{ apart }} order by place_in_order) as next_cause,
+        lead(moment) over (partition by subject_id{{ apart }} order by place_in_order) as following_moment,
+        lead(is_active) over (partition by subject_id{{ apart }} order by place_in_order) as following_is_active,
+        lead(cause_of_moment) over (partition by subject_id{{ apart }} order by place_in_order) as following_cause,
         max(case when is_active = 1 then moment end) over (
             partition by subject_id{{ apart }} order by place_in_order rows between unbounded preceding and current row
         ) as last_active
     from rows_in_order
+),
+
+{% set this_moment = 'partition by subject_id' ~ apart ~ ', ' ~ in_order[:-2] -%}
+-- several rows of one moment all last until the next moment, which the last of them knows
+rows_with_next_moment as (
+    select
+        *,
+        max(case when copy_number = copies then following_moment end) over ({{ this_moment }}) as next_moment,
+        max(case when copy_number = copies then following_is_active end) over ({{ this_moment }}) as next_is_active,
+        max(case when copy_number = copies then following_cause end) over ({{ this_moment }}) as next_cause
+    from rows_with_neighbours
 ),
 
 pieces as (
@@ -188,7 +208,7 @@ pieces as (
         {{ spellcurve._first_fault([
             ['nothing_open', 'last_active is null', spellcurve._detail(status, 'raw_kind', 'comes before any active status of this subject')]
         ], o, so_far=true) | indent(8) }}
-    from rows_with_neighbours
+    from rows_with_next_moment
 )
     {%- endset -%}
 
