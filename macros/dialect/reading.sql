@@ -12,8 +12,33 @@
     {{ return('^[0-9]{4}-[0-9]{2}-[0-9]{2}([ T]([01][0-9]|2[0-3]):[0-5][0-9](:[0-5][0-9]([.][0-9]{1,6})?)?)?$') }}
 {% endmacro %}
 
+{# Where nothing like try_cast exists the text is looked at first: its form, then whether the calendar has that day. #}
 {% macro default___read_moment(expression) %}
-    {{ return('try_cast(' ~ expression ~ ' as ' ~ spellcurve._moment_type() ~ ')') }}
+    {%- set text = spellcurve._as_text(expression) -%}
+    {%- set year, month, day = [
+        'cast(substr(' ~ text ~ ', 1, 4) as integer)', 'cast(substr(' ~ text ~ ', 6, 2) as integer)',
+        'cast(substr(' ~ text ~ ', 9, 2) as integer)'
+    ] -%}
+    {{ return(
+        "case when " ~ text ~ " ~ '" ~ spellcurve._iso_moment_pattern() ~ "' then case when " ~ year ~ " > 0 and " ~ month
+        ~ " between 1 and 12 and " ~ day ~ " between 1 and case when " ~ month ~ " in (4, 6, 9, 11) then 30 when " ~ month
+        ~ " <> 2 then 31 when mod(" ~ year ~ ", 4) = 0 and (mod(" ~ year ~ ", 100) <> 0 or mod(" ~ year
+        ~ ", 400) = 0) then 29 else 28 end then cast(" ~ text ~ " as " ~ spellcurve._moment_type() ~ ") end end"
+    ) }}
+{% endmacro %}
+
+{% macro postgres___read_moment(expression) %}
+    {{ return(
+        "case when pg_typeof(" ~ expression ~ ") in ('date'::regtype, 'timestamp'::regtype, 'timestamptz'::regtype) then cast("
+        ~ spellcurve._as_text(expression) ~ " as timestamp) else " ~ spellcurve.default___read_moment(expression) ~ " end"
+    ) }}
+{% endmacro %}
+
+{% macro spark___read_moment(expression) %}
+    {%- set text = spellcurve._as_text(expression) -%}
+    {{ return(
+        "case when " ~ text ~ " rlike '" ~ spellcurve._iso_moment_pattern() ~ "' then try_cast(" ~ text ~ " as timestamp_ntz) end"
+    ) }}
 {% endmacro %}
 
 {% macro duckdb___read_moment(expression) %}
@@ -37,7 +62,16 @@
 {% endmacro %}
 
 {% macro default___read_number(expression) %}
-    {{ return('try_cast(' ~ expression ~ ' as ' ~ spellcurve._double_type() ~ ')') }}
+    {%- set text = spellcurve._as_text(expression) -%}
+    {{ return(
+        "case when " ~ text ~ " ~ '" ~ spellcurve._number_pattern() ~ "' then cast(" ~ text ~ " as " ~ spellcurve._double_type()
+        ~ ") end"
+    ) }}
+{% endmacro %}
+
+{% macro spark___read_number(expression) %}
+    {%- set text = spellcurve._as_text(expression) -%}
+    {{ return("case when " ~ text ~ " rlike '" ~ spellcurve._number_pattern() ~ "' then try_cast(" ~ text ~ " as double) end") }}
 {% endmacro %}
 
 {% macro duckdb___read_number(expression) %}

@@ -41,6 +41,10 @@
     {{ return('timestamp') }}
 {% endmacro %}
 
+{% macro spark___moment_type() %}
+    {{ return('timestamp_ntz') }}
+{% endmacro %}
+
 
 {% macro _moment_literal(text) %}
     {{ return("cast('" ~ text ~ "' as " ~ spellcurve._moment_type() ~ ')') }}

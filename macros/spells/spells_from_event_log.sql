@@ -37,7 +37,9 @@
         {%- do spellcurve._fail(caller_name, "the kind '" ~ value ~ "' is in opens and in closes; it must be in one of them.") -%}
     {%- endfor -%}
     {%- set apart = spellcurve._apart_from_refused(o) -%}
-    {%- set in_order = 'moment, ' ~ ('sequence_value, ' if sequence else '') -%}
+    {%- set when_columns = 'moment, ' ~ ('sequence_value, ' if sequence else '') -%}
+    {#- rows without a sequence come last, wherever the warehouse would put its nulls -#}
+    {%- set in_order = 'moment, ' ~ ('case when sequence_value is null then 1 else 0 end, sequence_value, ' if sequence else '') -%}
 
     {%- set faults = spellcurve._recording_faults(o) + [
         ['no_subject', 'subject_id is null', spellcurve._text(subject ~ ' is null')],
@@ -75,7 +77,7 @@ rows_with_side as (
 
 rows_judged as (
     select
-        subject_id, {{ in_order }}kind, is_open{{ spellcurve._carried(o) }}
+        subject_id, {{ when_columns }}kind, is_open{{ spellcurve._carried(o) }}
         {%- if o.rows == 'faulty' %}, raw_start, null as raw_end, kind as raw_kind{% endif %},
         {{ spellcurve._first_fault(faults, o) | indent(8) }}
     from rows_with_side
@@ -84,14 +86,14 @@ rows_judged as (
 rows_counted as (
     select
         *,
-        row_number() over (partition by subject_id{{ apart }}, {{ in_order }}kind order by moment) as copy_number
+        row_number() over (partition by subject_id{{ apart }}, {{ when_columns }}kind order by moment) as copy_number
     from rows_judged
     {{ spellcurve._without_refused(o) }}
 ),
 
 single_rows as (
     select
-        subject_id, {{ in_order }}kind, is_open{{ spellcurve._carried(o) }}
+        subject_id, {{ when_columns }}kind, is_open{{ spellcurve._carried(o) }}
         {%- if o.rows == 'faulty' %}, raw_start, raw_end, raw_kind{% endif %},
         {{ spellcurve._first_fault([
             ['duplicate_row', 'copy_number > 1', spellcurve._text('another row of this subject has the same time and kind')]
@@ -103,8 +105,8 @@ moments_with_sides as (
     select
         *,
         case
-            when min(is_open) over (partition by subject_id{{ apart }}, {{ in_order[:-2] }})
-                <> max(is_open) over (partition by subject_id{{ apart }}, {{ in_order[:-2] }}) then 1
+            when min(is_open) over (partition by subject_id{{ apart }}, {{ when_columns[:-2] }})
+                <> max(is_open) over (partition by subject_id{{ apart }}, {{ when_columns[:-2] }}) then 1
             else 0
         end as is_mixed,
         row_number() over (partition by subject_id{{ apart }} order by {{ in_order }}kind) as place_in_order

@@ -81,10 +81,10 @@ rows_in_order as (
     select
         *,
         row_number() over (
-            partition by subject_id{{ apart }} order by started, {{ ended_or_never }}, cause
+            partition by subject_id{{ apart }} order by started, {{ ended_or_never }}, cause, ended
         ) as place_in_order,
         row_number() over (
-            partition by subject_id{{ apart }}, started, {{ ended_or_never }} order by cause
+            partition by subject_id{{ apart }}, started, {{ ended_or_never }} order by cause, ended
         ) as copy_number
     from rows_judged
     {{ spellcurve._without_refused(o) }}

@@ -40,7 +40,9 @@
     {%- endfor -%}
     {%- set active_statuses = spellcurve._check_values(caller_name, 'active', active) -%}
     {%- set apart = spellcurve._apart_from_refused(o) -%}
-    {%- set in_order = 'moment, ' ~ ('sequence_value, ' if sequence else '') -%}
+    {%- set when_columns = 'moment, ' ~ ('sequence_value, ' if sequence else '') -%}
+    {#- rows without a sequence come last, wherever the warehouse would put its nulls -#}
+    {%- set in_order = 'moment, ' ~ ('case when sequence_value is null then 1 else 0 end, sequence_value, ' if sequence else '') -%}
 
     {%- set faults = spellcurve._recording_faults(o) + [
         ['no_subject', 'subject_id is null', spellcurve._text(subject ~ ' is null')],
@@ -93,7 +95,7 @@ days_read as (
 {% endif -%}
 rows_judged as (
     select
-        subject_id, {{ in_order }}cause{{ spellcurve._carried(o) }}
+        subject_id, {{ when_columns }}cause{{ spellcurve._carried(o) }}
         {%- if ended is not none %}, own_end{% endif %},
         case when status in ({{ spellcurve._texts(active_statuses) }}) then 1 else 0 end as is_active
         {%- if o.rows == 'faulty' %}, raw_start, {{ 'raw_end' if ended is not none else 'null as raw_end' }}, status as raw_kind{% endif %},
@@ -129,9 +131,9 @@ rows_on_calendar as (
 moments_compared as (
     select
         *,
-        min(is_active) over (partition by subject_id{{ apart }}, {{ in_order[:-2] }}) as least_active,
-        max(is_active) over (partition by subject_id{{ apart }}, {{ in_order[:-2] }}) as most_active,
-        min(cause) over (partition by subject_id{{ apart }}, {{ in_order[:-2] }}) as cause_of_moment
+        min(is_active) over (partition by subject_id{{ apart }}, {{ when_columns[:-2] }}) as least_active,
+        max(is_active) over (partition by subject_id{{ apart }}, {{ when_columns[:-2] }}) as most_active,
+        min(cause) over (partition by subject_id{{ apart }}, {{ when_columns[:-2] }}) as cause_of_moment
     from {{ 'rows_on_calendar' if by_snapshot else 'rows_judged' }}
     {{ spellcurve._without_refused(o) }}
 ),
@@ -139,13 +141,13 @@ moments_compared as (
 {% set more = (['own_end'] if ended is not none else []) + (['next_day', 'last_day'] if by_snapshot else []) -%}
 rows_agreed as (
     select
-        subject_id, {{ in_order }}cause_of_moment, is_active
+        subject_id, {{ when_columns }}cause_of_moment, is_active
         {%- for name in more %}, {{ name }}{% endfor %}{{ spellcurve._carried(o) }}
         {%- if o.rows == 'faulty' %}, raw_start, raw_end, raw_kind{% endif %},
         {{ spellcurve._first_fault([
             [
                 'conflicting_status', 'least_active <> most_active',
-                spellcurve._detail(effective, 'raw_start', 'has an active and an inactive status of this subject; a sequence column would tell their order')
+                spellcurve._detail(effective, 'raw_start', 'has an active and an inactive status of this subject')
             ]
         ], o, so_far=true) | indent(8) }}
     from moments_compared
@@ -154,8 +156,8 @@ rows_agreed as (
 moments_counted as (
     select
         *,
-        row_number() over (partition by subject_id{{ apart }}, {{ in_order[:-2] }} order by cause_of_moment) as copy_number,
-        count(*) over (partition by subject_id{{ apart }}, {{ in_order[:-2] }}) as copies
+        row_number() over (partition by subject_id{{ apart }}, {{ when_columns[:-2] }} order by cause_of_moment) as copy_number,
+        count(*) over (partition by subject_id{{ apart }}, {{ when_columns[:-2] }}) as copies
     from rows_agreed
     {{ spellcurve._without_refused(o) }}
 ),
@@ -179,7 +181,7 @@ rows_with_neighbours as (
     from rows_in_order
 ),
 
-{% set this_moment = 'partition by subject_id' ~ apart ~ ', ' ~ in_order[:-2] -%}
+{% set this_moment = 'partition by subject_id' ~ apart ~ ', ' ~ when_columns[:-2] -%}
 -- several rows of one moment all last until the next moment, which the last of them knows
 rows_with_next_moment as (
     select
