@@ -1,0 +1,7 @@
+{{ config(enabled=var('spellcurve_demo', false) | string | lower == 'true') }}
+
+{{ spellcurve.test_curve_is_sound(
+    ref('demo_borrowing_survival'),
+    by=['plan'],
+    spells=ref('demo_borrowing_spells')
+) }}

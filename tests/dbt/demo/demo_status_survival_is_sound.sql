@@ -1,0 +1,6 @@
+{{ config(enabled=var('spellcurve_demo', false) | string | lower == 'true') }}
+
+{{ spellcurve.test_curve_is_sound(
+    ref('demo_status_survival'),
+    spells=ref('demo_status_spells')
+) }}
