@@ -48,7 +48,10 @@
         ['no_subject', 'subject_id is null', spellcurve._text(subject ~ ' is null')],
         ['no_time', 'raw_start is null', spellcurve._text(effective ~ ' is null')],
         ['unreadable_time', 'moment is null', spellcurve._detail(effective, 'raw_start', 'is not a date or a time')],
-        ['after_as_of', ('time_read' if by_snapshot else 'moment') ~ ' > ' ~ o.as_of_sql, spellcurve._detail(effective, 'raw_start', 'is after as_of ' ~ o.as_of)],
+        [
+            'after_as_of', ('time_read' if by_snapshot else 'moment') ~ ' > ' ~ o.as_of_sql,
+            spellcurve._detail(effective, 'raw_start', 'is after as_of ' ~ o.as_of)
+        ],
         ['no_status', 'status is null', spellcurve._text(status ~ ' is null')]
     ] -%}
     {%- if ended is not none -%}
