@@ -1,4 +1,4 @@
-"""Runs the package's macros on real engines: dbt compiles a call for the engine's adapter, the engine executes the SQL."""
+"""Runs the macros on real engines: dbt compiles a call for the engine's adapter, the engine runs the SQL."""
 
 from __future__ import annotations
 
@@ -10,7 +10,7 @@ from functools import cached_property
 from io import StringIO
 from itertools import chain
 from pathlib import Path
-from typing import Any
+from typing import Any, ClassVar
 
 from dbt.cli.main import dbtRunner
 
@@ -28,11 +28,12 @@ class CompilationError(Exception):
 class Engine:
     """A warehouse under test.
 
-    `render` compiles macro calls, `load` makes a table of rows, `make` one of a macro's result, `query` and `run` give rows as dicts.
+    `render` compiles macro calls, `load` makes a table of rows, `make` one of a macro's result, `query` and
+    `run` give rows as dicts.
     """
 
     name: str
-    types: dict[str, str]
+    types: ClassVar[dict[str, str]]
 
     def __init__(self, scratch: Path) -> None:
         self.scratch = scratch
@@ -79,7 +80,11 @@ class Engine:
         """Run dbt on this engine; returns its outcome and all that it said."""
         said: list[str] = []
         target = self.scratch / ("target" if project == ROOT else f"target-{project.name}")
-        places = {"--profiles-dir": self.scratch, "--target-path": target, "--log-path": self.scratch / "logs"}
+        places = {
+            "--profiles-dir": self.scratch,
+            "--target-path": target,
+            "--log-path": self.scratch / "logs",
+        }
         command, *rest = arguments
         options = ["--quiet", "--project-dir", str(project), "--target", self.name]
         for option, place in places.items():
@@ -112,7 +117,7 @@ class Engine:
 
 class DuckDB(Engine):
     name = "duckdb"
-    types = {
+    types: ClassVar[dict[str, str]] = {
         "bigint": "bigint",
         "double": "double",
         "text": "varchar",
@@ -190,7 +195,7 @@ class Spark(Engine):
     """One session for the whole run; its metastore and warehouse lie in the scratch folder."""
 
     name = "spark"
-    types = {
+    types: ClassVar[dict[str, str]] = {
         "bigint": "bigint",
         "double": "double",
         "text": "string",
@@ -221,7 +226,13 @@ class Spark(Engine):
         self.session.sparkContext.setLogLevel("OFF")
 
     def output(self) -> dict[str, Any]:
-        return {"type": "spark", "method": "session", "host": "none", "schema": "spellcurve_tests", "threads": 1}
+        return {
+            "type": "spark",
+            "method": "session",
+            "host": "none",
+            "schema": "spellcurve_tests",
+            "threads": 1,
+        }
 
     def quote(self, name: str) -> str:
         return "`" + name.replace("`", "``") + "`"

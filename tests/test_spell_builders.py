@@ -1,4 +1,4 @@
-"""The six spell builders against their slow and obvious Python counterparts, row for row, on the engine itself."""
+"""The six spell builders against their slow and obvious Python counterparts, row for row, on the engine."""
 
 from __future__ import annotations
 
@@ -30,7 +30,7 @@ STATUSES = ("active", "trial", "paused", "lapsed", None)
 
 
 def combinations(most: int = 40, **choices: list) -> list[dict]:
-    """Some combinations of options, always the same ones; few, since each is compiled (all of them in one dbt run)."""
+    """Some combinations of options, always the same ones; few, since each is compiled (in one dbt run)."""
     every = [dict(zip(choices, chosen, strict=True)) for chosen in product(*choices.values())]
     some = Random(1963).sample(every, min(most, len(every)))
     return [{name: value for name, value in options.items() if value is not None} for options in some]
@@ -42,7 +42,9 @@ INTERVALS = combinations(
     recorded_at=[None, "written_on"],
     cause=[None, "kind"],
     grace=[0, 2, 40],
-) + combinations(unit=UNITS, observe_from=OBSERVED_FROM, cause=[None, "kind"], overlaps=["keep", "refuse"], most=20)
+) + combinations(
+    unit=UNITS, observe_from=OBSERVED_FROM, cause=[None, "kind"], overlaps=["keep", "refuse"], most=20
+)
 EVENT_LOG = combinations(
     opens=[["join", "rejoin"]],
     closes=["leave", ["leave", "lapse"], {"leave": "left", "lapse": "lapsed"}],
@@ -90,19 +92,25 @@ def without_detail(rows: list[dict]) -> Counter:
 
 
 def calls(builder: str, names: tuple[str, ...], options: dict) -> list[str]:
-    arguments = ", ".join([repr(name) for name in names] + [f"{name}={value!r}" for name, value in options.items()])
+    arguments = ", ".join(
+        [repr(name) for name in names] + [f"{name}={value!r}" for name, value in options.items()]
+    )
     return [f"{builder}({arguments}, rows={rows!r})" for rows in ("sound", "faulty")]
 
 
-def check(engine, builder: str, tables: dict, columns: tuple, options: dict, among: list[dict], types=None, **fixed) -> None:
-    """Both kinds of rows equal those of the Python builder, and every source row is in exactly one of them."""
+def check(
+    engine, builder: str, tables: dict, columns: tuple, options: dict, among: list[dict], types=None, **fixed
+) -> None:
+    """Both kinds of rows equal those of the Python builder; every source row is in exactly one of them."""
     fixed = {"carry": ["plan"], "source_rows": True} | fixed
     names = (*tables, *columns)
     engine.render_all([call for each in among for call in calls(builder, names, fixed | each)])
     for name, rows in tables.items():
         engine.load(name, types or RAW, rows)
     sound, faulty = (engine.run(call) for call in calls(builder, names, fixed | options))
-    expected_sound, expected_faulty = getattr(rebuild, builder)(*tables.values(), *columns, **(fixed | options))
+    expected_sound, expected_faulty = getattr(rebuild, builder)(
+        *tables.values(), *columns, **(fixed | options)
+    )
     assert without_detail(sound) == without_detail(expected_sound)
     assert without_detail(faulty) == without_detail(expected_faulty)
     assert all(row["detail"] for row in faulty)
@@ -141,7 +149,15 @@ def test_status_snapshots(engine, rows, options):
 @given(rows=raw_rows((None,)), options=st.sampled_from(ACTIVITY))
 @settings(max_examples=250)
 def test_activity(engine, rows, options):
-    check(engine, "spells_from_activity", {"raw": rows}, ("subject_key", "began"), options, ACTIVITY, as_of=AS_OF)
+    check(
+        engine,
+        "spells_from_activity",
+        {"raw": rows},
+        ("subject_key", "began"),
+        options,
+        ACTIVITY,
+        as_of=AS_OF,
+    )
 
 
 @given(
@@ -199,4 +215,6 @@ def test_durations(engine, rows, options):
 @settings(max_examples=150)
 def test_dates_and_timestamps_together(engine, rows, options):
     columns = ("subject_key", "began", "ended")
-    check(engine, "spells_from_intervals", {"raw": rows}, columns, options, TYPED_INTERVALS, TYPED, as_of=AS_OF)
+    check(
+        engine, "spells_from_intervals", {"raw": rows}, columns, options, TYPED_INTERVALS, TYPED, as_of=AS_OF
+    )

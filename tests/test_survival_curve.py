@@ -37,7 +37,11 @@ def call(by: list[str], **options) -> str:
 def exactly(rows: list[dict], by: list[str], **options) -> dict:
     spells = [
         exact.Spell(
-            row["entry"], row["duration"], row["event"], Fraction(row["weight"]), group=tuple(row[name] for name in by)
+            row["entry"],
+            row["duration"],
+            row["event"],
+            Fraction(row["weight"]),
+            group=tuple(row[name] for name in by),
         )
         for row in rows
     ]
@@ -93,7 +97,8 @@ def test_three_thousand_durations_of_a_billion_spells(engine, scale):
 
 def test_few_events_among_a_billion_keep_their_digits(engine):
     rows = [
-        {"plan": "a", "entry": 0, "duration": duration, "event": 1, "weight": 1} for duration in range(1, 40, 3)
+        {"plan": "a", "entry": 0, "duration": duration, "event": 1, "weight": 1}
+        for duration in range(1, 40, 3)
     ] + [{"plan": "a", "entry": 0, "duration": 60, "event": 0, "weight": 10**9}]
     for scale in exact.INTERVAL_SCALES:
         check(engine, WHOLE, rows, [], interval_scale=scale)
@@ -112,7 +117,17 @@ def test_the_groups_are_first_and_keep_their_names(engine):
     engine.load(
         "spells",
         {"group": "text", "member's plan": "text", **WHOLE},
-        [{"group": "x", "member's plan": "y", "plan": "z", "entry": 0, "duration": 1, "event": 1, "weight": 1}],
+        [
+            {
+                "group": "x",
+                "member's plan": "y",
+                "plan": "z",
+                "entry": 0,
+                "duration": 1,
+                "event": 1,
+                "weight": 1,
+            }
+        ],
     )
     row = engine.run("""survival_curve('spells', by=['group', "member's plan", 'plan'])""")[0]
     assert list(row)[:4] == ["group", "member's plan", "plan", "duration"]
@@ -125,14 +140,20 @@ def test_the_groups_are_first_and_keep_their_names(engine):
         ("'spells', confidense=0.9", "unknown argument 'confidense'; it takes spells, by, confidence"),
         ("", "argument 'spells' is missing; give a relation"),
         ("'spells', confidence=95", "confidence is 95; it must be a number between 0 and 1"),
-        ("'spells', interval_scale='loglog'", "interval_scale is 'loglog'; it must be one of 'linear', 'log', 'log-log'"),
+        (
+            "'spells', interval_scale='loglog'",
+            "interval_scale is 'loglog'; it must be one of 'linear', 'log', 'log-log'",
+        ),
         ("'spells', horizon=-1", "horizon is -1; it must be a whole number of at least 0"),
         ("'spells', horizon='30'", "horizon is '30'; it must be a whole number of at least 0"),
         ("'spells', grid='daily'", "grid is 'daily'; it must be one of 'steps', 'every'"),
         ("'spells', by='events'", "by names the column 'events', which the result uses itself; rename it"),
         ("'spells', by=['plan', 'Plan']", "by names the column 'Plan' twice"),
         ("'spells', by=7", "by is 7; it must be a column name or a list of column names"),
-        ("'spells', minimum_at_risk=true", "minimum_at_risk is True; it must be a whole number of at least 0"),
+        (
+            "'spells', minimum_at_risk=true",
+            "minimum_at_risk is True; it must be a whole number of at least 0",
+        ),
         ("'spells', small_counts='mask'", "small_counts is 'mask'; it must be one of 'keep', 'hide'"),
         ("'spells', weights=2", "weights is 2; it must be one of 'whole', 'fractional'"),
         ("'spells', [], 0.95, 'log', none, 'steps', 0, 'keep', 'whole', 9", "too many arguments"),
