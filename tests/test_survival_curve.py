@@ -156,7 +156,7 @@ def test_the_groups_are_first_and_keep_their_names(engine):
         ),
         ("'spells', small_counts='mask'", "small_counts is 'mask'; it must be one of 'keep', 'hide'"),
         ("'spells', weights=2", "weights is 2; it must be one of 'whole', 'fractional'"),
-        ("'spells', [], 0.95, 'log', none, 'steps', 0, 'keep', 'whole', 9", "too many arguments"),
+        ("'spells', [], 0.95, 'log', none, 'steps', 0, 'keep', 'whole', 'none', 9", "too many arguments"),
     ],
 )
 def test_bad_arguments_stop_compilation_with_one_sentence(engine, arguments, sentence):

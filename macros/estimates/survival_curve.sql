@@ -1,15 +1,16 @@
 {% macro survival_curve(
     spells, by=[], confidence=0.95, interval_scale='log-log', horizon=none, grid='steps', minimum_at_risk=0, small_counts='keep',
-    weights='whole'
+    weights='whole', simultaneous='none'
 ) %}
     {%- do spellcurve._check_call(
         'survival_curve',
         {'spells': spells},
-        ['spells', 'by', 'confidence', 'interval_scale', 'horizon', 'grid', 'minimum_at_risk', 'small_counts', 'weights'],
+        ['spells', 'by', 'confidence', 'interval_scale', 'horizon', 'grid', 'minimum_at_risk', 'small_counts', 'weights',
+         'simultaneous'],
         kwargs, varargs
     ) -%}
     {{ return(adapter.dispatch('survival_curve', 'spellcurve')(
-        spells, by, confidence, interval_scale, horizon, grid, minimum_at_risk, small_counts, weights
+        spells, by, confidence, interval_scale, horizon, grid, minimum_at_risk, small_counts, weights, simultaneous
     )) }}
 {% endmacro %}
 
@@ -22,8 +23,22 @@
 {% endmacro %}
 
 
+{# Which band is wanted: true means equal precision. Its critical values come from a formula for small chances. #}
+{% macro _check_simultaneous(caller_name, simultaneous, confidence) %}
+    {%- set band = simultaneous -%}
+    {%- if simultaneous is boolean -%}
+        {%- set band = 'equal-precision' if simultaneous else 'none' -%}
+    {%- endif -%}
+    {%- do spellcurve._check_choice(caller_name, 'simultaneous', band, ['none', 'equal-precision', 'hall-wellner']) -%}
+    {%- if band != 'none' and confidence < 0.8 -%}
+        {%- do spellcurve._fail(caller_name, 'confidence is ' ~ confidence ~ '; with simultaneous bands it must be at least 0.8.') -%}
+    {%- endif -%}
+    {{ return(band) }}
+{% endmacro %}
+
+
 {% macro default__survival_curve(
-    spells, by, confidence, interval_scale, horizon, grid, minimum_at_risk, small_counts, weights
+    spells, by, confidence, interval_scale, horizon, grid, minimum_at_risk, small_counts, weights, simultaneous
 ) %}
     {%- set caller_name = 'survival_curve' -%}
     {%- set by = spellcurve._check_columns(caller_name, 'by', by, spellcurve._survival_curve_columns()) -%}
@@ -36,10 +51,13 @@
     {%- if horizon is not none -%}
         {%- do spellcurve._check_whole(caller_name, 'horizon', horizon, 0) -%}
     {%- endif -%}
+    {%- set simultaneous = spellcurve._check_simultaneous(caller_name, simultaneous, confidence) -%}
     {%- set groups = spellcurve._aliases(by, 'group_') -%}
     {%- set each_group = spellcurve._each_then_comma(groups) -%}
     {%- set partition = spellcurve._partition_by(groups) -%}
-    {%- set z = spellcurve._normal_quantile(0.5 + confidence / 2) -%}
+    {%- set is_band = simultaneous != 'none' -%}
+    {%- set z = 1.0 if is_band else spellcurve._normal_quantile(0.5 + confidence / 2) -%}
+    {%- set reach = 'band_reach' if is_band else 'relative_error' -%}
 
     {%- set ctes -%}
 {{ spellcurve._risk_sets(spells, by, horizon, weights) }},
@@ -75,7 +93,9 @@ running_sums as (
         sum(hazard_variance_step) over ({{ so_far }}) as cumulative_hazard_variance
     from steps_of_curve
 ),
-
+{% if is_band %}
+{{ spellcurve._rows_with_reach('running_sums', simultaneous, confidence, groups, horizon) }},
+{% endif %}
 figures as (
     select
         {{ each_group }}duration, at_risk, events, censored, is_step, hazard, next_at_risk, next_duration, log_survival,
@@ -86,9 +106,12 @@ figures as (
         end as stage,
         case when has_ended = 1 then 0 else {{ spellcurve._exp('log_survival') }} end as survival,
         sqrt(greenwood_sum) as relative_error,
+        {%- if is_band %}
+        band_reach,
+        {%- endif %}
         cumulative_hazard,
         sqrt(cumulative_hazard_variance) as cumulative_hazard_std_error
-    from running_sums
+    from {{ 'rows_with_reach' if is_band else 'running_sums' }}
 ),
 
 figures_with_bounds as (
@@ -96,11 +119,11 @@ figures_with_bounds as (
         {{ each_group }}duration, at_risk, events, censored, is_step, hazard, next_at_risk, next_duration, survival,
         case stage when 1 then survival * relative_error when 2 then 0 end as std_error,
         case stage
-            when 1 then {{ spellcurve._survival_bound(interval_scale, 'survival', 'log_survival', 'relative_error', z, -1) }}
+            when 1 then {{ spellcurve._survival_bound(interval_scale, 'survival', 'log_survival', reach, z, -1) }}
             when 2 then 1
         end as survival_lower,
         case stage
-            when 1 then {{ spellcurve._survival_bound(interval_scale, 'survival', 'log_survival', 'relative_error', z, 1) }}
+            when 1 then {{ spellcurve._survival_bound(interval_scale, 'survival', 'log_survival', reach, z, 1) }}
             when 2 then 1
         end as survival_upper,
         cumulative_hazard,
@@ -153,10 +176,12 @@ select
 from rows_wanted
     {%- endset -%}
 
-    {{ return(
-        spellcurve._provenance(caller_name, {'spells': spells}, {
-            'by': by, 'confidence': confidence, 'interval_scale': interval_scale, 'horizon': horizon, 'grid': grid,
-            'minimum_at_risk': minimum_at_risk, 'small_counts': small_counts, 'weights': weights
-        }) ~ '\n' ~ body
-    ) }}
+    {%- set options = {
+        'by': by, 'confidence': confidence, 'interval_scale': interval_scale, 'horizon': horizon, 'grid': grid,
+        'minimum_at_risk': minimum_at_risk, 'small_counts': small_counts, 'weights': weights
+    } -%}
+    {%- if is_band -%}
+        {%- do options.update({'simultaneous': simultaneous}) -%}
+    {%- endif -%}
+    {{ return(spellcurve._provenance(caller_name, {'spells': spells}, options) ~ '\n' ~ body) }}
 {% endmacro %}

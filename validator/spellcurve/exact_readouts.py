@@ -11,7 +11,7 @@ Garwood 1936 (interval of a Poisson rate); Hall and Wellner 1980 and Nair 1984 (
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable, Sequence
+from collections.abc import Callable, Iterable, Sequence
 from dataclasses import dataclass
 from decimal import Context, Decimal, localcontext
 from fractions import Fraction
@@ -186,3 +186,264 @@ def restricted_mean(
         lower = max(Decimal(0), exact.to_decimal(mean) - reach)
         upper = min(Decimal(horizon - survived), exact.to_decimal(mean) + reach)
     return RestrictedMean(horizon, mean, float(std_error), float(lower), float(upper), OBSERVED)
+
+
+@dataclass(frozen=True)
+class ConditionalSurvival:
+    """Survival at a duration of those who survived so far; figures None unless status is OBSERVED."""
+
+    survived: int
+    duration: int
+    at_risk: Fraction | None
+    survival: Fraction | None
+    std_error: float | None
+    survival_lower: float | None
+    survival_upper: float | None
+    expected_time: Fraction | None
+    status: str
+
+
+def survival_beyond(
+    rows: Sequence[CurveRow], survived: int, confidence: float = 0.95, interval_scale: str = "log-log"
+) -> list[ConditionalSurvival]:
+    """Compute survival from a duration on, of those who survived until then.
+
+    The relative variance is Greenwood's sum over the events in between. ``expected_time`` is the expected
+    time between ``survived`` and the row's duration; None if some row in between is blanked out.
+
+    Args:
+        rows: as for ``survival_at``.
+        survived: whole units.
+        confidence: level of the pointwise interval.
+        interval_scale: one of ``exact.INTERVAL_SCALES``.
+
+    Returns:
+        a row at ``survived`` and one for each later row; one with a status alone if there is no telling.
+    """
+    row, following = _in_force(rows, survived)
+    status = NONE_SURVIVED if _ended_at(rows) <= survived else _status(rows, survived)
+    if status != OBSERVED:
+        hidden = status == TOO_FEW_AT_RISK
+        at_risk = _at_risk(row, following, survived) if hidden else None
+        return [ConditionalSurvival(survived, survived, at_risk, None, None, None, None, None, status)]
+    base = _survival(rows, row)
+    assert base
+    found = []
+    for one in [row, *(later for later in rows if later.duration > survived)]:
+        duration = max(one.duration, survived)
+        at_risk = _at_risk(row, following, survived) if one is row else one.at_risk
+        survival = _survival(rows, one)
+        if survival is None:
+            nothing = (None,) * 5
+            found.append(ConditionalSurvival(survived, duration, at_risk, *nothing, TOO_FEW_AT_RISK))
+            continue
+        share = survival / base
+        variance = _greenwood_between(rows, survived, duration)
+        std_error: float | None = None
+        bounds: tuple[float | None, float | None] = (None, None)
+        with localcontext(Context(prec=60)):
+            if share:
+                std_error = float(exact.to_decimal(share) * exact.to_decimal(variance).sqrt())
+                bounds = exact._interval(share, variance, confidence, interval_scale)
+        time = None
+        if all(_status(rows, unit) == OBSERVED for unit in range(survived, duration)):
+            shares = [_survival(rows, _in_force(rows, unit)[0]) for unit in range(survived, duration)]
+            time = sum((share for share in shares if share is not None), Fraction(0)) / base
+        found.append(
+            ConditionalSurvival(survived, duration, at_risk, share, std_error, *bounds, time, OBSERVED)
+        )
+    return found
+
+
+def _greenwood_between(rows: Sequence[CurveRow], after: int, until: int) -> Fraction:
+    """Sum d / (n (n - d)) over the events between two durations, except those that leave nobody."""
+    total = Fraction(0)
+    for row in rows:
+        if after < row.duration <= until and row.events:
+            assert row.at_risk is not None
+            if row.events < row.at_risk:
+                total += row.events / (row.at_risk * (row.at_risk - row.events))
+    return total
+
+
+@dataclass(frozen=True)
+class Band:
+    """Events per unit at risk after ``from_duration``, up to ``to_duration``; the first has 0 as well."""
+
+    from_duration: int
+    to_duration: int
+    events: Fraction
+    time_at_risk: Fraction
+    hazard: Fraction | None
+    hazard_lower: float | None
+    hazard_upper: float | None
+    status: str
+
+
+def hazard_by_band(
+    spells: Iterable[Spell], width: int, confidence: float = 0.95, horizon: int | None = None
+) -> list[Band]:
+    """Compute the event rate of one group in bands.
+
+    A spell is one unit at risk for each whole u with entry < u <= duration.
+
+    Args:
+        spells: spells of one group.
+        width: of a band, in units.
+        confidence: level of the exact interval of the rate (Garwood 1936).
+        horizon: last duration that counts.
+
+    Returns:
+        bands by duration, up to the end of follow-up.
+    """
+    counted = [spell for spell in spells if spell.counts]
+    last = max((spell.duration for spell in counted), default=0)
+    if horizon is not None:
+        last = min(last, horizon)
+    bands = []
+    for start in range(0, max(last, 1), width):
+        end = start + width if horizon is None else min(start + width, horizon)
+        events = time_at_risk = Fraction(0)
+        for spell in counted:
+            first, final = max(spell.entry, start), min(spell.duration, end, last)
+            time_at_risk += Fraction(spell.weight) * max(0, final - first)
+            if spell.event and (start < spell.duration <= end or spell.duration == start == 0):
+                events += Fraction(spell.weight)
+        hazard = events / time_at_risk if time_at_risk else None
+        limits: tuple[float | None, float | None] = (None, None)
+        if time_at_risk and events.denominator == 1:
+            lower, upper = poisson_limits(int(events), confidence)
+            limits = lower / float(time_at_risk), upper / float(time_at_risk)
+        status = OBSERVED if time_at_risk else "no_time_at_risk"
+        bands.append(Band(start, end, events, time_at_risk, hazard, *limits, status))
+    return bands
+
+
+def poisson_limits(events: int, confidence: float) -> tuple[float, float]:
+    """Find the exact limits of a Poisson mean: each leaves (1 - confidence) / 2 to the counts beyond.
+
+    The lower is 0 for no events. Bisection on sums of Poisson probabilities in 40 decimal digits, the sums
+    taken outwards from ``events`` until they stop mattering.
+    """
+    with localcontext(Context(prec=40)):
+        share = (1 - Decimal(repr(confidence))) / 2
+        far = Decimal(40) * (Decimal(events + 1).sqrt() + 4)
+        lower = Decimal(0)
+        if events:
+            # at least `events` happen: P(events) (1 + m/(e+1) + m²/((e+1)(e+2)) + …)
+            lower = _solve(
+                lambda m: share - _poisson(m, events) * _upwards(m, events), Decimal(0), Decimal(events)
+            )
+        # at most `events` happen: P(events) (1 + e/m + e(e-1)/m² + …)
+        upper = _solve(
+            lambda m: _poisson(m, events) * _downwards(m, events) - share,
+            Decimal(events) + share,
+            events + far,
+        )
+        return float(lower), float(upper)
+
+
+def _poisson(mean: Decimal, count: int) -> Decimal:
+    """P(count) for a Poisson mean; the factorial from Stirling's series where it would be long."""
+    if count < 60:
+        return (-mean).exp() * mean**count / math.factorial(count)
+    n = Decimal(count)
+    series = 1 / (12 * n) - 1 / (360 * n**3) + 1 / (1260 * n**5) - 1 / (1680 * n**7) + 1 / (1188 * n**9)
+    return (n * (mean / n).ln() + n - mean - series).exp() / (2 * exact._PI * n).sqrt()
+
+
+def _upwards(mean: Decimal, count: int) -> Decimal:
+    total = term = Decimal(1)
+    while term > total * Decimal(10) ** -20:
+        count += 1
+        term *= mean / count
+        total += term
+    return total
+
+
+def _downwards(mean: Decimal, count: int) -> Decimal:
+    total = term = Decimal(1)
+    while count and term > total * Decimal(10) ** -20:
+        term *= count / mean
+        total += term
+        count -= 1
+    return total
+
+
+def _solve(falls: Callable[[Decimal], Decimal], low: Decimal, high: Decimal) -> Decimal:
+    """Find where a function that falls from above 0 to below 0 is 0, by the Illinois form of regula falsi."""
+    low = max(low, high * Decimal(10) ** -30)
+    at_low, at_high = falls(low), falls(high)
+    for _ in range(200):
+        middle = (low * at_high - high * at_low) / (at_high - at_low)
+        if abs(high - low) < high * Decimal(10) ** -16 or middle in (low, high):
+            break
+        value = falls(middle)
+        if value == 0:
+            return middle
+        if (value > 0) == (at_low > 0):
+            low, at_low, at_high = middle, value, at_high / 2
+        else:
+            high, at_high, at_low = middle, value, at_low / 2
+    return middle
+
+
+def equal_precision_critical_value(variance_ratio: Fraction | float, confidence: float) -> float:
+    """Find the multiple of the standard error that a band of equal precision takes (Nair 1984).
+
+    It solves 4 φ(x) / x + φ(x) (x - 1 / x) ln(variance_ratio) = 1 - confidence, an approximation for small
+    chances (Miller and Siegmund 1982); the ratio is Greenwood's sum at the last event to that at the first.
+    """
+    spread = math.log(variance_ratio)
+
+    def excess(x: float) -> float:
+        density = math.exp(-x * x / 2) / math.sqrt(2 * math.pi)
+        return density * (4 / x + (x - 1 / x) * spread) - (1 - confidence)
+
+    return _bisect(excess, 1.3, 20.0)
+
+
+def hall_wellner_critical_value(last: float, confidence: float) -> float:
+    """Find what the absolute Brownian bridge stays below from 0 to ``last`` with the given probability."""
+    return _bisect(lambda x: _bridge_crosses(x, last) - (1 - confidence), 0.9 * math.sqrt(last), 20.0)
+
+
+def _bridge_crosses(x: float, last: float) -> float:
+    """Sum over reflections (Hall and Wellner 1980) the chance that the absolute bridge reaches x."""
+    scale = math.sqrt(last * (1 - last))
+    crossing = math.erfc(x / scale / math.sqrt(2))
+    for k in range(1, 9):
+        near, far = (2 * k * x * (1 - last) - x) / scale, (2 * k * x * (1 - last) + x) / scale
+        between = (math.erfc(near / math.sqrt(2)) - math.erfc(far / math.sqrt(2))) / 2
+        crossing -= 2 * (-1) ** k * math.exp(-2 * k * k * x * x) * between
+    return crossing
+
+
+def _bisect(falls: Callable[[float], float], low: float, high: float) -> float:
+    for _ in range(200):
+        middle = (low + high) / 2
+        low, high = (middle, high) if falls(middle) > 0 else (low, middle)
+    return (low + high) / 2
+
+
+def band_reaches(rows: Sequence[CurveRow], kind: str, confidence: float = 0.95) -> list[float | None]:
+    """Compute what each row's band takes for z times std_error / survival; None where survival is 0 or 1.
+
+    Args:
+        rows: one group's rows of the whole curve (no horizon), with their Greenwood sums.
+        kind: ``equal-precision`` or ``hall-wellner``.
+        confidence: with which the band holds between the first and the last event.
+    """
+    sums = [row.greenwood_sum for row in rows if row.greenwood_sum]
+    if not sums:
+        return [None] * len(rows)
+    spells = sum((row.events or 0) + (row.censored or 0) for row in rows)
+    if kind == "equal-precision":
+        critical = equal_precision_critical_value(max(sums) / min(sums), confidence)
+        return [critical * math.sqrt(row.greenwood_sum) if row.greenwood_sum else None for row in rows]
+    scaled = float(spells * max(sums))
+    critical = hall_wellner_critical_value(scaled / (1 + scaled), confidence)
+    return [
+        critical * (1 + float(spells * row.greenwood_sum)) / math.sqrt(spells) if row.greenwood_sum else None
+        for row in rows
+    ]
