@@ -34,6 +34,7 @@ class Engine:
 
     name: str
     types: ClassVar[dict[str, str]]
+    keeps_milliseconds = False
 
     def __init__(self, scratch: Path) -> None:
         self.scratch = scratch

@@ -16,6 +16,26 @@
     {{ return('datediff(cast(' ~ later ~ ' as date), cast(' ~ earlier ~ ' as date))') }}
 {% endmacro %}
 
+{% macro snowflake___days_between(earlier, later) %}
+    {{ return('datediff(day, cast(' ~ earlier ~ ' as date), cast(' ~ later ~ ' as date))') }}
+{% endmacro %}
+
+{% macro bigquery___days_between(earlier, later) %}
+    {{ return('date_diff(cast(' ~ later ~ ' as date), cast(' ~ earlier ~ ' as date), day)') }}
+{% endmacro %}
+
+{% macro trino___days_between(earlier, later) %}
+    {{ return("date_diff('day', cast(" ~ earlier ~ ' as date), cast(' ~ later ~ ' as date))') }}
+{% endmacro %}
+
+{% macro athena___days_between(earlier, later) %}
+    {{ return(spellcurve.trino___days_between(earlier, later)) }}
+{% endmacro %}
+
+{% macro clickhouse___days_between(earlier, later) %}
+    {{ return("dateDiff('day', cast(" ~ earlier ~ ' as Date32), cast(' ~ later ~ ' as Date32))') }}
+{% endmacro %}
+
 
 {% macro _microseconds_between(earlier, later) %}
     {{ return(adapter.dispatch('_microseconds_between', 'spellcurve')(earlier, later)) }}
@@ -29,6 +49,31 @@
     {{ return('(epoch_us(' ~ later ~ ') - epoch_us(' ~ earlier ~ '))') }}
 {% endmacro %}
 
+{% macro snowflake___microseconds_between(earlier, later) %}
+    {{ return('datediff(microsecond, ' ~ earlier ~ ', ' ~ later ~ ')') }}
+{% endmacro %}
+
+{% macro redshift___microseconds_between(earlier, later) %}
+    {{ return('datediff(microsecond, ' ~ earlier ~ ', ' ~ later ~ ')') }}
+{% endmacro %}
+
+{% macro bigquery___microseconds_between(earlier, later) %}
+    {{ return('datetime_diff(' ~ later ~ ', ' ~ earlier ~ ', microsecond)') }}
+{% endmacro %}
+
+{# To the millisecond: it has no finer difference. #}
+{% macro trino___microseconds_between(earlier, later) %}
+    {{ return("1000 * date_diff('millisecond', " ~ earlier ~ ', ' ~ later ~ ')') }}
+{% endmacro %}
+
+{% macro athena___microseconds_between(earlier, later) %}
+    {{ return(spellcurve.trino___microseconds_between(earlier, later)) }}
+{% endmacro %}
+
+{% macro clickhouse___microseconds_between(earlier, later) %}
+    {{ return("dateDiff('microsecond', " ~ earlier ~ ', ' ~ later ~ ')') }}
+{% endmacro %}
+
 {# From days and times of day: Spark's own differences go through the session's time zone, and its hours round up. #}
 {% macro spark___microseconds_between(earlier, later) %}
     {{ return(
@@ -39,8 +84,8 @@
 
 {% macro _microseconds_into_day(moment) %}
     {{ return(
-        '(3600000000L * hour(' ~ moment ~ ') + 60000000L * minute(' ~ moment ~ ') + cast(1000000 * extract(second from ' ~ moment
-        ~ ') as bigint))'
+        '(3600000000L * hour(' ~ moment ~ ') + 60000000L * minute(' ~ moment ~ ') + 1000000L * second(' ~ moment
+        ~ ") + cast(date_format(" ~ moment ~ ", 'SSSSSS') as bigint))"
     ) }}
 {% endmacro %}
 
@@ -52,4 +97,24 @@
 
 {% macro default___moment_plus(moment, amount, unit) %}
     {{ return('(' ~ moment ~ " + interval '" ~ amount ~ ' ' ~ unit ~ "')") }}
+{% endmacro %}
+
+{% macro snowflake___moment_plus(moment, amount, unit) %}
+    {{ return('dateadd(' ~ unit ~ ', ' ~ amount ~ ', ' ~ moment ~ ')') }}
+{% endmacro %}
+
+{% macro bigquery___moment_plus(moment, amount, unit) %}
+    {{ return('datetime_add(' ~ moment ~ ', interval ' ~ amount ~ ' ' ~ unit ~ ')') }}
+{% endmacro %}
+
+{% macro trino___moment_plus(moment, amount, unit) %}
+    {{ return('date_add(' ~ "'" ~ unit ~ "', " ~ amount ~ ', ' ~ moment ~ ')') }}
+{% endmacro %}
+
+{% macro athena___moment_plus(moment, amount, unit) %}
+    {{ return(spellcurve.trino___moment_plus(moment, amount, unit)) }}
+{% endmacro %}
+
+{% macro clickhouse___moment_plus(moment, amount, unit) %}
+    {{ return('(' ~ moment ~ ' + interval ' ~ amount ~ ' ' ~ unit ~ ')') }}
 {% endmacro %}

@@ -34,6 +34,47 @@
     ) }}
 {% endmacro %}
 
+{# It inherits PostgreSQL's macros, and knows no pg_typeof. #}
+{% macro redshift___read_moment(expression) %}
+    {{ return(spellcurve.default___read_moment(expression)) }}
+{% endmacro %}
+
+{% macro snowflake___read_moment(expression) %}
+    {%- set text = spellcurve._as_text(expression) -%}
+    {{ return(
+        "case when regexp_like(" ~ text ~ ", '" ~ spellcurve._iso_moment_pattern() ~ "') then try_cast(" ~ text ~ " as timestamp_ntz) end"
+    ) }}
+{% endmacro %}
+
+{% macro bigquery___read_moment(expression) %}
+    {%- set text = spellcurve._as_text(expression) -%}
+    {{ return(
+        "case when regexp_contains(" ~ text ~ ", '" ~ spellcurve._iso_moment_pattern() ~ "') then safe_cast(" ~ text
+        ~ " as datetime) end"
+    ) }}
+{% endmacro %}
+
+{% macro trino___read_moment(expression) %}
+    {%- set text = spellcurve._as_text(expression) -%}
+    {{ return(
+        "case when regexp_like(" ~ text ~ ", '" ~ spellcurve._iso_moment_pattern() ~ "') then try_cast(replace(" ~ text
+        ~ ", 'T', ' ') as " ~ spellcurve._moment_type() ~ ") end"
+    ) }}
+{% endmacro %}
+
+{% macro athena___read_moment(expression) %}
+    {{ return(spellcurve.trino___read_moment(expression)) }}
+{% endmacro %}
+
+{# A day that no calendar has is null only where the text has both a day and a time. #}
+{% macro clickhouse___read_moment(expression) %}
+    {%- set text = spellcurve._as_text(expression) -%}
+    {{ return(
+        "case when match(" ~ text ~ ", '" ~ spellcurve._iso_moment_pattern() ~ "') and toString(toDate32OrNull(substring(" ~ text
+        ~ ", 1, 10))) = substring(" ~ text ~ ", 1, 10) then parseDateTime64BestEffortOrNull(" ~ text ~ ", 6) end"
+    ) }}
+{% endmacro %}
+
 {% macro spark___read_moment(expression) %}
     {%- set text = spellcurve._as_text(expression) -%}
     {{ return(
@@ -67,6 +108,32 @@
         "case when " ~ text ~ " ~ '" ~ spellcurve._number_pattern() ~ "' then cast(" ~ text ~ " as " ~ spellcurve._double_type()
         ~ ") end"
     ) }}
+{% endmacro %}
+
+{% macro snowflake___read_number(expression) %}
+    {%- set text = spellcurve._as_text(expression) -%}
+    {{ return("case when regexp_like(" ~ text ~ ", '" ~ spellcurve._number_pattern() ~ "') then try_cast(" ~ text ~ " as double precision) end") }}
+{% endmacro %}
+
+{% macro bigquery___read_number(expression) %}
+    {%- set text = spellcurve._as_text(expression) -%}
+    {{ return(
+        "case when regexp_contains(" ~ text ~ ", '" ~ spellcurve._number_pattern() ~ "') then safe_cast(" ~ text ~ " as float64) end"
+    ) }}
+{% endmacro %}
+
+{% macro trino___read_number(expression) %}
+    {%- set text = spellcurve._as_text(expression) -%}
+    {{ return("case when regexp_like(" ~ text ~ ", '" ~ spellcurve._number_pattern() ~ "') then try_cast(" ~ text ~ " as double) end") }}
+{% endmacro %}
+
+{% macro athena___read_number(expression) %}
+    {{ return(spellcurve.trino___read_number(expression)) }}
+{% endmacro %}
+
+{% macro clickhouse___read_number(expression) %}
+    {%- set text = spellcurve._as_text(expression) -%}
+    {{ return("case when match(" ~ text ~ ", '" ~ spellcurve._number_pattern() ~ "') then toFloat64OrNull(" ~ text ~ ") end") }}
 {% endmacro %}
 
 {% macro spark___read_number(expression) %}

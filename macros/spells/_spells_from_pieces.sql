@@ -159,8 +159,8 @@ select
     subject_id,
     {{ spellcurve._integer('row_number() over (partition by subject_id order by spell_started, last_seen, event, known_cause)') }}
         as spell_number,
-    {{ spellcurve._date('spell_started') if o.by_day else 'spell_started' }} as started_at,
-    {{ spellcurve._date('last_seen') if o.by_day else 'last_seen' }} as last_seen_at,
+    {{ spellcurve._date('spell_started') if o.by_day else spellcurve._moment_kept('spell_started') }} as started_at,
+    {{ spellcurve._date('last_seen') if o.by_day else spellcurve._moment_kept('last_seen') }} as last_seen_at,
     {% if o.observe_from is none -%}
     {{ spellcurve._integer('0') }} as entry,
     {%- else -%}

@@ -18,12 +18,6 @@
 {% endmacro %}
 
 
-{# A text literal. #}
-{% macro _text(value) %}
-    {{ return("'" ~ (value | string).replace("'", "''") ~ "'") }}
-{% endmacro %}
-
-
 {% macro _texts(values) %}
     {%- set quoted = [] -%}
     {%- for value in values -%}

@@ -28,6 +28,7 @@ class Case:
     tables: dict[str, Table]
     calls: list[str]
     made: dict[str, str] = field(default_factory=dict)
+    may_be_empty: bool = False
 
 
 def all_cases() -> list[Case]:
