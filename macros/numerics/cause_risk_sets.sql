@@ -1,0 +1,198 @@
+{#
+    What `causes` may be: none for every cause in the spells, one cause or a list of causes to show, or a mapping from causes to labels that
+    shows (and merges) those. Returned as none or a list of [cause, label].
+#}
+{% macro _cause_labels(caller_name, causes) %}
+    {%- if causes is none -%}
+        {{ return(none) }}
+    {%- endif -%}
+    {%- set given = causes if causes is mapping else {} -%}
+    {%- if causes is not mapping -%}
+        {%- for cause in spellcurve._check_values(caller_name, 'causes', causes) -%}
+            {%- do given.update({cause: cause}) -%}
+        {%- endfor -%}
+    {%- endif -%}
+    {%- set labels = [] -%}
+    {%- for cause, label in given.items() -%}
+        {%- if cause is not string or label is not string -%}
+            {%- do spellcurve._fail(
+                caller_name, 'causes names ' ~ spellcurve._shown(label if cause is string else cause) ~ '; causes and labels are texts.'
+            ) -%}
+        {%- endif -%}
+        {%- do labels.append([cause, label]) -%}
+    {%- endfor -%}
+    {%- if labels | length == 0 -%}
+        {%- do spellcurve._fail(
+            caller_name, 'causes is empty; it must be a cause, a list of causes, or a mapping of cause to label.'
+        ) -%}
+    {%- endif -%}
+    {{ return(labels) }}
+{% endmacro %}
+
+
+{#
+    As _risk_sets, with the causes told apart: the CTEs that end with `cause_risk_sets` (group_1, …, cause_number, cause, duration, is_step,
+    at_risk, events of the cause, all_events), one row a group, cause and duration.
+
+    labels: what _cause_labels gave. Without labels, every cause that an event at risk has anywhere in the table stands in every group;
+    an event without a cause is of cause 'unknown'. The spells are read once; the grid of causes and durations is unrolled from the
+    aggregate without a second reading of it.
+#}
+{% macro _cause_risk_sets(spells, by, horizon, weights, labels) %}
+    {%- set groups = spellcurve._aliases(by, 'group_') -%}
+    {%- set each_group = spellcurve._each_then_comma(groups) -%}
+    {%- set partition = spellcurve._partition_by(groups) -%}
+    {%- set keys = [] -%}
+    {%- for name in by -%}{%- do keys.append(spellcurve._column(name)) -%}{%- endfor -%}
+    {%- set weight = spellcurve._double('weight') -%}
+    {%- set cause_of_event = 'coalesce(' ~ spellcurve._as_text('cause') ~ ", 'unknown')" -%}
+    {%- set counts = 'event = 1 and (entry < duration or entry = 0)' -%}
+    {%- set own_cause -%}
+        {%- if labels is none -%}
+case when {{ counts }} then {{ cause_of_event }} end
+        {%- else -%}
+case
+            {%- for cause, label in labels %}
+            when {{ counts }} and {{ cause_of_event }} = {{ spellcurve._text(cause) }} then {{ spellcurve._text(label) }}
+            {%- endfor %}
+        end
+        {%- endif -%}
+    {%- endset -%}
+    {%- set shown = [] -%}
+    {%- for cause, label in labels or [] if label not in shown -%}{%- do shown.append(label) -%}{%- endfor -%}
+    {%- if horizon is none -%}
+        {%- set entry, duration = 'entry', 'duration' -%}
+    {%- else -%}
+        {%- set entry = 'least(entry, ' ~ (horizon + 1) ~ ')' -%}
+        {%- set duration = 'case when duration <= ' ~ horizon ~ ' then duration when entry < duration then ' ~ (horizon + 2)
+            ~ ' else ' ~ (horizon + 1) ~ ' end' -%}
+    {%- endif -%}
+outcomes as (
+    select
+        {{ spellcurve._columns_as(by, groups) }}{{ entry }} as entry,
+        {{ duration }} as duration,
+        {{ own_cause }} as own_cause,
+        sum(case when event = 1 then {{ weight }} else 0 end) as events,
+        sum({{ weight }}) as spells
+    from {{ spells }}
+    group by {{ spellcurve._each_then_comma(keys) }}{{ entry }}, {{ duration }}, {{ own_cause }}
+),
+
+sides as (
+    select 1 as side
+    union all
+    select 2 as side
+    union all
+    select 3 as side
+    {%- if horizon is not none %}
+    union all
+    select 4 as side
+    {%- endif %}
+),
+
+-- each outcome as it leaves the risk set (1), enters it late (2), and makes sure of the rows at 0 (3) and at the horizon (4)
+turns as (
+    select
+        {{ each_group -}}
+        case side when 1 then duration when 2 then entry when 3 then 0{% if horizon is not none %} else {{ horizon }}{% endif %} end as duration,
+        case when side = 1 then own_cause end as own_cause,
+        case when side = 1 then events else 0 end as events,
+        case when side = 1 then spells else 0 end as leaving,
+        case when side = 2 then spells else 0 end as entered,
+        case when side = 2 then 0 else 1 end as is_step
+    from outcomes
+    cross join sides
+    where
+        side = 3
+        or (side = 1 and (entry < duration or entry = 0))
+        or (side = 2 and entry > 0 and entry < duration)
+        {%- if horizon is not none %}
+        or (side = 4 and duration > {{ horizon }} and entry < duration)
+        {%- endif %}
+),
+
+changes as (
+    select
+        {{ each_group }}duration, own_cause,
+        sum(events) as events,
+        sum(leaving) as leaving,
+        sum(entered) as entered,
+        max(is_step) as is_step
+    from turns
+    group by {{ each_group }}duration, own_cause
+),
+
+{% set at_duration = spellcurve._partition_by(groups + ['duration']) -%}
+{%- set from_the_end = partition ~ 'order by duration desc range between unbounded preceding and current row' -%}
+{%- set null_first = 'case when own_cause is null then 0 else 1 end, own_cause' -%}
+-- a duration has one row for each cause seen at it, and one without a cause that comes first
+changes_with_totals as (
+    select
+        {{ each_group }}duration, own_cause, events,
+        sum(leaving - entered) over ({{ from_the_end }}) as net_leaving,
+        sum(leaving + entered) over ({{ partition | trim }}) as all_turns,
+        sum(events) over ({{ at_duration | trim }}) as all_events,
+        max(is_step) over ({{ at_duration | trim }}) as is_step,
+        row_number() over ({{ at_duration }}order by {{ null_first }}) as place,
+        {%- if labels is none %}
+        dense_rank() over (order by {{ null_first }}) - 1 as own_number
+        {%- else %}
+        case own_cause
+            {%- for label in shown %}
+            when {{ spellcurve._text(label) }} then {{ loop.index }}
+            {%- endfor %}
+            else 0
+        end as own_number
+        {%- endif %}
+    from changes
+),
+
+changes_numbered as (
+    select
+        {{ each_group }}duration, own_cause, own_number, events, all_events, is_step, place,
+        {% if weights == 'whole' -%}
+        net_leaving as at_risk,
+        {%- else -%}
+        case when net_leaving > 1e-12 * all_turns then net_leaving else 0 end as at_risk,
+        {%- endif %}
+        {{ 'max(own_number) over ()' if labels is none else shown | length }} as causes
+    from changes_with_totals
+),
+
+{{ spellcurve._repeated_rows('cells', 'changes_numbered', 'case when place = 1 then causes else 1 end', 4) }},
+
+cells_named as (
+    select
+        {{ each_group }}duration, own_cause, own_number, events, all_events, is_step, at_risk,
+        case when place = 1 then units_on + 1 else own_number end as cause_number
+    from cells
+),
+
+cause_cells as (
+    select
+        {{ each_group }}cause_number, duration,
+        max(is_step) as is_step,
+        max(at_risk) as at_risk,
+        sum(case when cause_number = own_number then events else 0 end) as events,
+        max(all_events) as all_events,
+        max(case when cause_number = own_number then own_cause end) as own_cause
+    from cells_named
+    group by {{ each_group }}cause_number, duration
+),
+
+cause_risk_sets as (
+    select
+        {{ each_group }}cause_number,
+        {% if labels is none -%}
+        max(own_cause) over (partition by cause_number) as cause,
+        {%- else -%}
+        case cause_number
+            {%- for label in shown %}
+            when {{ loop.index }} then {{ spellcurve._text(label) }}
+            {%- endfor %}
+        end as cause,
+        {%- endif %}
+        duration, is_step, at_risk, events, all_events
+    from cause_cells
+)
+{%- endmacro %}
