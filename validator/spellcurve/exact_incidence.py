@@ -12,7 +12,7 @@ Gray 1988 (comparison of incidences).
 from __future__ import annotations
 
 from collections import defaultdict
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from decimal import Context, Decimal, localcontext
 from fractions import Fraction
@@ -190,3 +190,51 @@ def share_uncertainty(
         error = float(to_decimal(share) * relative.sqrt())
         lower, upper = _interval(share, variance / share**2, confidence, interval_scale)
     return error, lower, upper
+
+
+@dataclass(frozen=True)
+class TableRow:
+    """One band of a life table; ``greenwood_sum`` is the exact sum behind the standard error."""
+
+    from_duration: int
+    to_duration: int
+    entering: Fraction
+    censored: Fraction
+    exposed: Fraction
+    events: Fraction
+    hazard_share: Fraction
+    survival: Fraction
+    greenwood_sum: Fraction
+    std_error: float | None
+
+
+def actuarial_table(spells: Sequence[Spell], width: int, horizon: int | None = None) -> list[TableRow]:
+    """Compute the life table of one group in bands of ``width`` units (Cutler and Ederer 1958)."""
+    if not spells:
+        return []
+    counted = [spell for spell in spells if spell.counts]
+    last = max((spell.duration for spell in counted), default=0)
+    survival, greenwood, rows = Fraction(1), Fraction(0), []
+    for low in range(0, last + 1, width):
+        high = low + width
+        if horizon is not None and high > horizon:
+            break
+        entering = _weight(spell for spell in counted if spell.entry <= low <= spell.duration)
+        late = _weight(spell for spell in counted if low < spell.entry < high)
+        ending = [spell for spell in counted if low <= spell.duration < high]
+        events, censored = _weight(s for s in ending if s.event), _weight(s for s in ending if not s.event)
+        exposed = entering + late / 2 - censored / 2
+        hazard = min(Fraction(1), events / exposed) if events else Fraction(0)
+        survival *= 1 - hazard
+        if 0 < hazard < 1:
+            greenwood += hazard / (exposed - events)
+        error = None
+        if survival:
+            with localcontext(Context(prec=_DIGITS)):
+                error = float(to_decimal(survival) * to_decimal(greenwood).sqrt())
+        rows.append(TableRow(low, high, entering, censored, exposed, events, hazard, survival, greenwood, error))
+    return rows
+
+
+def _weight(spells: Iterable[Spell]) -> Fraction:
+    return sum((Fraction(spell.weight) for spell in spells), Fraction(0))
