@@ -342,7 +342,7 @@ def test_limits_of_a_count_are_those_of_the_poisson_distribution(engine, confide
 @given(rows=spell_rows(most=60), confidence=st.sampled_from([0.8, 0.95, 0.999]))
 @settings(max_examples=40)
 def test_bands_are_the_pointwise_bounds_with_another_reach(engine, kind, rows, confidence):
-    allowed = {"equal-precision": 1e-10, "hall-wellner": 1e-8}[kind]
+    allowed = 1e-8
     engine.load("spells", WHOLE, rows)
     call = curve_call(interval_scale="log", confidence=confidence, simultaneous=kind)
     found = {(row["plan"], row["duration"]): row for row in engine.run(call)}

@@ -45,42 +45,20 @@ rows_with_reach as (
 )
     {%- else %}
 
-band_log_ratios as (
+band_angles as (
     select
         *,
-        ln(last_variance / first_variance) as log_ratio
+        acos(greatest(-1, least(1,
+            ln(1 + ln(last_variance / first_variance)) * {{ spellcurve._double_literal(2 / spellcurve._logarithm(101)) }} - 1
+        ))) as band_angle
     from band_ranges
 ),
-
-    {%- set z = spellcurve._normal_quantile(0.5 + confidence / 2) %}
-    {%- set goal = spellcurve._logarithm(1 - confidence) + 0.91893853320467274 %}
-
-band_criticals_0 as (
-    select
-        *,
-        1 + sqrt({{ spellcurve._double_literal(z * z) }} + 2 * ln(1 + log_ratio)) as critical_0
-    from band_log_ratios
-),
-
-    {%- for step in range(1, 8) %}
-    {%- set x = 'critical_' ~ (step - 1) %}
-    {%- set chance = '(4 / ' ~ x ~ ' + (' ~ x ~ ' - 1 / ' ~ x ~ ') * log_ratio)' %}
-    {%- set slope = '(log_ratio + (log_ratio - 4) / (' ~ x ~ ' * ' ~ x ~ '))' %}
-
-band_criticals_{{ step }} as (
-    select
-        *,
-        {{ x }} - (ln({{ chance }}) - {{ x }} * {{ x }} / 2 - ({{ spellcurve._double_literal(goal) }}))
-            / ({{ slope }} / {{ chance }} - {{ x }}) as critical_{{ step }}
-    from band_criticals_{{ step - 1 }}
-),
-    {%- endfor %}
 
 rows_with_reach as (
     select
         *,
-        critical_7 * sqrt(greenwood_sum) as band_reach
-    from band_criticals_7
+        ({{ spellcurve._equal_precision_series('band_angle', confidence) }}) * sqrt(greenwood_sum) as band_reach
+    from band_angles
 )
     {%- endif %}
 {%- endmacro %}
@@ -89,18 +67,56 @@ rows_with_reach as (
 {#
     Critical values of the Brownian bridge from 0 to a, divided by sqrt(a), as a series of cosines in the angle of a, good to 1e-8: the
     critical value is found at 40 Chebyshev points of the angle while the model compiles. `angle` is arccos(4 / pi arcsin(sqrt(a)) - 1).
+    (A search in SQL would name each step's figure many times in the next, and some warehouses compute it as often.)
 #}
 {% macro _bridge_series(angle, confidence) %}
-    {%- set count = 40 -%}
     {%- set state = namespace(start=1.3) -%}
-    {%- set points, figures = [], [] -%}
-    {%- for k in range(count) -%}
-        {%- set point = spellcurve._cosine(3.14159265358979324 * (k + 0.5) / count) -%}
+    {%- set points, figures = spellcurve._chebyshev_points(40), [] -%}
+    {%- for point in points -%}
         {%- set root = spellcurve._cosine(1.57079632679489662 - 0.78539816339744831 * (point + 1)) -%}
         {%- set state.start = spellcurve._bridge_critical(root, confidence, state.start * root) / root -%}
-        {%- do points.append(point) -%}
         {%- do figures.append(state.start) -%}
     {%- endfor -%}
+    {{ return(spellcurve._cosine_series(points, figures, angle)) }}
+{% endmacro %}
+
+
+{#
+    Critical values of equal precision as a series of cosines, good to 1e-8: they solve (Nair 1984, after Miller and Siegmund 1982)
+    density(x) (4 / x + (x - 1 / x) r) = 1 - confidence, r being the logarithm of Greenwood's sum at the last event over that at the
+    first. `angle` is arccos(2 ln(1 + r) / ln(101) - 1): r stays below 100, for no sum is e^100 times another.
+#}
+{% macro _equal_precision_series(angle, confidence) %}
+    {%- set z = spellcurve._normal_quantile(0.5 + confidence / 2) -%}
+    {%- set goal = spellcurve._logarithm_in_few_steps(1 - confidence) + 0.91893853320467274 -%}
+    {%- set points, figures = spellcurve._chebyshev_points(30), [] -%}
+    {%- for point in points -%}
+        {%- set r = 101 ** ((point + 1) / 2) - 1 -%}
+        {%- set state = namespace(x=1 + (z * z + 4.7 * (point + 1)) ** 0.5) -%}
+        {%- for step in range(8) -%}
+            {%- set chance = 4 / state.x + (state.x - 1 / state.x) * r -%}
+            {%- set slope = (r + (r - 4) / (state.x * state.x)) / chance - state.x -%}
+            {%- set excess = spellcurve._logarithm_in_few_steps(chance) - state.x * state.x / 2 - goal -%}
+            {%- set state.x = state.x - excess / slope -%}
+        {%- endfor -%}
+        {%- do figures.append(state.x) -%}
+    {%- endfor -%}
+    {{ return(spellcurve._cosine_series(points, figures, angle)) }}
+{% endmacro %}
+
+
+{% macro _chebyshev_points(count) %}
+    {%- set points = [] -%}
+    {%- for k in range(count) -%}
+        {%- do points.append(spellcurve._cosine(3.14159265358979324 * (k + 0.5) / count)) -%}
+    {%- endfor -%}
+    {{ return(points) }}
+{% endmacro %}
+
+
+{# The polynomial through figures at Chebyshev points, as c_0 + c_1 cos(angle) + c_2 cos(2 angle) + … where the angle is a column. #}
+{% macro _cosine_series(points, figures, angle) %}
+    {%- set count = points | length -%}
     {%- set terms = [] -%}
     {%- set recurrence = namespace(before=[1.0] * count, now=points) -%}
     {%- for degree in range(count) -%}
