@@ -238,3 +238,63 @@ def actuarial_table(spells: Sequence[Spell], width: int, horizon: int | None = N
 
 def _weight(spells: Iterable[Spell]) -> Fraction:
     return sum((Fraction(spell.weight) for spell in spells), Fraction(0))
+
+
+@dataclass(frozen=True)
+class Unit:
+    """One subject, or ``weight`` identical ones: its spells as (entry, duration), and the tenures of its events."""
+
+    spells: tuple[tuple[int, int], ...]
+    events: tuple[int, ...]
+    weight: int | Fraction = 1
+
+
+@dataclass(frozen=True)
+class CountRow:
+    """The mean count of one group at one duration, with both variances exactly."""
+
+    duration: int
+    at_risk: Fraction
+    events: Fraction
+    mean_count: Fraction
+    robust_variance: Fraction
+    naive_variance: Fraction
+
+
+def mean_cumulative_count(
+    units: Sequence[Unit], horizon: int | None = None, grid: str = "steps"
+) -> list[CountRow]:
+    """Compute Nelson's mean cumulative count of one group; each event must be at risk in a spell of its unit.
+
+    The robust variance is the sum over units of the square of the sum over u <= t of
+    (events of the unit - its spells at risk * d/n) / n (Lawless and Nadeau 1995); the naive one the sum of d/n².
+    """
+    if not units:
+        return []
+    everyone = [
+        Spell(entry, duration, 0, Fraction(unit.weight)) for unit in units for entry, duration in unit.spells
+    ]
+    happened: dict[int, Fraction] = defaultdict(Fraction)
+    for unit in units:
+        for tenure in unit.events:
+            happened[tenure] += Fraction(unit.weight)
+    shown = shown_durations(everyone, grid, horizon)
+    if grid == "steps":
+        last = shown[-1] if horizon is not None else max(spell.duration for spell in everyone)
+        shown = sorted({*shown, *(tenure for tenure in happened if tenure <= last)})
+    at_risk = _at_risk_counter(everyone)
+    scores = [Fraction(0) for _ in units]
+    mean, naive = Fraction(0), Fraction(0)
+    rows: list[CountRow] = []
+    for t in sorted({*shown, *happened}):
+        n, d = at_risk(t), happened.get(t, Fraction(0))
+        if d:
+            mean += d / n
+            naive += d / n**2
+            for i, unit in enumerate(units):
+                own = sum(entry < t <= end or entry == t == 0 for entry, end in unit.spells)
+                scores[i] += (unit.events.count(t) - own * d / n) / n
+        if t in shown:
+            robust = sum((unit.weight * score**2 for unit, score in zip(units, scores, strict=True)), Fraction(0))
+            rows.append(CountRow(t, n, d, mean, robust, naive))
+    return rows
