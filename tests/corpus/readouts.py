@@ -1,4 +1,4 @@
-"""Read-outs of the curves of many small random tables at once, cohorts, hazards by band and simultaneous bands."""
+"""Read-outs of the curves of many small random tables at once, cohorts, hazards by band, simultaneous bands."""
 
 from __future__ import annotations
 
@@ -12,16 +12,17 @@ BY = "by=['case id', 'order']"
 
 
 def levels_met_exactly() -> list[dict]:
-    """Survival of exactly 3/4, 1/2, 1/4 and 1/10, by several steps: n at risk fall to m, one group for each way."""
-    rows = []
-    for number, (n, m, steps) in enumerate(
+    """Survival of exactly 3/4, 1/2, 1/4 and 1/10: n at risk fall to m, one group for each way there."""
+    ways = [
         (n, m, steps)
         for n in range(2, 41)
         for m in range(1, n)
         if m * 4 in (n, 2 * n, 3 * n) or m * 10 == n
         for steps in (1, 2, 3, 5)
         if steps <= n - m
-    ):
+    ]
+    rows = []
+    for number, (n, m, steps) in enumerate(ways):
         for step in range(steps):
             lost = (n - m) // steps + (1 if step < (n - m) % steps else 0)
             row = {"order": "met", "case id": number, "entry": 0, "duration": 2 + step, "event": 1}
@@ -73,7 +74,9 @@ CASES = [
         ],
         {
             "many_curves": f"survival_curve('many_spells', {BY})",
-            "daily_curves": f"survival_curve('many_spells', {BY}, grid='every', horizon=20, minimum_at_risk=3)",
+            "daily_curves": (
+                f"survival_curve('many_spells', {BY}, grid='every', horizon=20, minimum_at_risk=3)"
+            ),
         },
     ),
     Case(
