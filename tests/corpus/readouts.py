@@ -1,4 +1,4 @@
-"""Read-outs of the curves of many small random tables at once, cohorts, hazards by band, simultaneous bands."""
+"""Read-outs of the curves of many small random tables, cohorts, hazards by band and simultaneous bands."""
 
 from __future__ import annotations
 
