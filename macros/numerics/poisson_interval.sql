@@ -19,14 +19,13 @@
     {%- endfor -%}
     {%- set shape = 'greatest(30, ' ~ events ~ ' + ' ~ extra ~ ')' -%}
     {%- set root = 'sqrt(' ~ spellcurve._double(shape) ~ ')' -%}
-    {%- set terms = spellcurve._gamma_quantile_terms(z) | reverse | list -%}
-    {%- set series = namespace(sql=spellcurve._double_literal(terms[0])) -%}
-    {%- for term in terms[1:] -%}
-        {%- set series.sql = spellcurve._double_literal(term) ~ ' + (' ~ series.sql ~ ') / ' ~ root -%}
+    {%- set terms = [] -%}
+    {%- for term in spellcurve._gamma_quantile_terms(z) -%}
+        {%- do terms.append('(' ~ spellcurve._double_literal(term) ~ ') / power(' ~ root ~ ', ' ~ loop.index0 ~ ')') -%}
     {%- endfor -%}
     {{ return(
         'case when ' ~ events ~ ' < ' ~ (30 - extra) ~ ' then case ' ~ spellcurve._integer(events) ~ ' ' ~ cases | join(' ')
-        ~ ' end when ' ~ events ~ ' is not null then ' ~ shape ~ ' + ' ~ root ~ ' * (' ~ series.sql ~ ') end'
+        ~ ' end when ' ~ events ~ ' is not null then ' ~ shape ~ ' + ' ~ root ~ ' * (' ~ terms | join(' + ') ~ ') end'
     ) }}
 {% endmacro %}
 

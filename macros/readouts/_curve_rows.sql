@@ -80,12 +80,13 @@ curve_rows as (
 {% endmacro %}
 
 
-{# What the row in force says of survival at a duration. #}
-{% macro _status_at(at) %}
+{# What the row in force says of survival at a duration; with `of_survivors`, of those who got that far. #}
+{% macro _status_at(at, of_survivors=false) %}
+    {%- set ended = 'when ended_at <= ' ~ at ~ " then 'none_survived'" if of_survivors else "when survival = 0 then 'observed'" -%}
     {{ return(
         "case when is_several_curves = 1 then 'several_curves'"
         ~ ' when duration > ' ~ at ~ " then 'beyond_follow_up'"
-        ~ " when survival = 0 then 'observed'"
+        ~ ' ' ~ ended
         ~ ' when duration < ' ~ at ~ " and next_duration is null then 'beyond_follow_up'"
         ~ " when survival is null then 'too_few_at_risk'"
         ~ ' when duration < ' ~ at ~ " and next_survival is null then 'too_few_at_risk'"

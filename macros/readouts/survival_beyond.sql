@@ -33,16 +33,13 @@ rows_from_there as (
         case when duration <= survived or previous_duration is null then 1 else 0 end as is_base,
         greatest(duration, survived) as duration,
         case when duration <= survived then {{ spellcurve._at_risk_at('survived') }} else at_risk end as at_risk,
-        case when duration <= survived then 0 else {{ spellcurve._greenwood_step() }} end as greenwood_step,
+        case when duration > survived then {{ spellcurve._greenwood_step() }} else 0 end as greenwood_step,
         {{ relative_variance }} as relative_variance,
         case
             when next_duration is null or next_survival is not null or next_duration <= greatest(duration, survived) + 1 then 0
             else 1
         end as is_before_gap,
-        case
-            when ended_at <= survived then 'none_survived'
-            else {{ spellcurve._status_at('survived') }}
-        end as status
+        {{ spellcurve._status_at('survived', of_survivors=true) }} as status
     from curve_rows
     cross join so_far
     where next_duration > survived or next_duration is null
