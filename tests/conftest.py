@@ -24,18 +24,44 @@ def engine(tmp_path_factory) -> Engine:
     return DuckDB(tmp_path_factory.mktemp("duckdb"))
 
 
+@pytest.fixture(scope="session")
+def started(tmp_path_factory) -> Iterator[dict[str, Engine]]:
+    """The engines that tests have asked for so far; each is started once and stopped at the end."""
+    engines: dict[str, Engine] = {}
+    yield engines
+    for engine in engines.values():
+        engine.close()
+
+
+def _start(name: str, started: dict[str, Engine], tmp_path_factory) -> Engine:
+    """Start an engine. In CI a missing one fails; elsewhere it is named in the summary as not run."""
+    if name not in started:
+        try:
+            started[name] = ENGINES[name](tmp_path_factory.mktemp(name))
+        except Exception as missing:
+            if os.environ.get("CI"):
+                raise
+            NOT_RUN[name] = (str(missing).splitlines() or [type(missing).__name__])[0]
+            pytest.skip(f"{name} is not here")
+    return started[name]
+
+
 @pytest.fixture(scope="session", params=list(ENGINES))
-def each_engine(request, tmp_path_factory) -> Iterator[Engine]:
-    """Every engine in turn. In CI a missing one fails; elsewhere it is named in the summary as not run."""
-    try:
-        engine = ENGINES[request.param](tmp_path_factory.mktemp(request.param))
-    except Exception as missing:
-        if os.environ.get("CI"):
-            raise
-        NOT_RUN[request.param] = str(missing).splitlines()[0]
-        pytest.skip(f"{request.param} is not here")
-    yield engine
-    engine.close()
+def each_engine(request, started, tmp_path_factory) -> Engine:
+    """Every engine in turn."""
+    return _start(request.param, started, tmp_path_factory)
+
+
+@pytest.fixture(scope="session", params=[name for name in ENGINES if name != "duckdb"])
+def other_engine(request, started, tmp_path_factory) -> Engine:
+    """Every engine but DuckDB in turn, for what is compared with DuckDB."""
+    return _start(request.param, started, tmp_path_factory)
+
+
+@pytest.fixture(scope="session")
+def spark(started, tmp_path_factory) -> Engine:
+    """Spark, for what only it can show."""
+    return _start("spark", started, tmp_path_factory)
 
 
 def pytest_terminal_summary(terminalreporter) -> None:

@@ -89,7 +89,8 @@ class Engine:
         command, *rest = arguments
         options = ["--quiet", "--project-dir", str(project), "--target", self.name]
         for option, place in places.items():
-            options += [option, str(place)]
+            if command != "deps" or option != "--target-path":
+                options += [option, str(place)]
         with redirect_stdout(StringIO()):
             runner = dbtRunner(callbacks=[lambda event: said.append(event.info.msg)])
             return runner.invoke([command, *options, *rest]), said

@@ -1,13 +1,16 @@
 {# Names of columns, lists of them, and texts, as they stand in SQL. #}
 
-{# A column's name as SQL: left as the user wrote it where the warehouse can read it so, quoted where it cannot. #}
+{#
+    A column's name as SQL: left as the user wrote it where the warehouse can read it so, quoted its way where it cannot or where the
+    user put it in quotes.
+#}
 {% macro _column(name) %}
     {%- set plain = modules.re.match('^[A-Za-z_][A-Za-z0-9_]*$', name) -%}
     {%- set quoted = modules.re.match('^(".*"|`.*`|\\[.*\\])$', name) -%}
-    {%- if quoted or (plain and name | lower not in spellcurve._reserved_words()) -%}
+    {%- if plain and name | lower not in spellcurve._reserved_words() -%}
         {{ return(name) }}
     {%- else -%}
-        {{ return(adapter.quote(name)) }}
+        {{ return(adapter.quote(spellcurve._bare(name) if quoted else name)) }}
     {%- endif -%}
 {% endmacro %}
 

@@ -13,6 +13,7 @@ COLUMNS = {
     "duration": "bigint",
     "event": "bigint",
     "weight": "bigint",
+    "PlanName": "text",
 }
 
 
@@ -30,6 +31,7 @@ def random_spells(tables: int, seed: int, fractional: bool = False) -> list[dict
                     "case id": number,
                     "order": dice.choice([None, "", "household", "O'Hara \"x\" é\\n", "individual"]),
                     "entry": dice.randint(0, duration) if late and dice.random() < 0.6 else 0,
+                    "PlanName": dice.choice(["Ä", "b"]),
                     "duration": duration,
                     "event": dice.choice(events),
                     "weight": dice.randint(1, 640) / 64 if fractional else dice.choice([1, 1, 3, 10**8]),
@@ -48,6 +50,7 @@ CASES = [
             f"survival_curve('many_spells', {BY}, interval_scale='linear', confidence=0.9, horizon=7)",
             f"survival_curve('many_spells', {BY}, interval_scale='log', grid='every', horizon=20)",
             "survival_curve('many_spells', by='order', interval_scale='logit', grid='every')",
+            """survival_curve('many_spells', by=['order', '"PlanName"'], horizon=9)""",
             f"survival_curve('many_spells', {BY}, interval_scale='arcsine', minimum_at_risk=3, small_counts='hide')",
             "survival_curve('many_spells')",
         ],
