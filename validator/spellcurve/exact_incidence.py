@@ -426,3 +426,68 @@ def quadratic_form(
             for j in range(p + 1, len(s)):
                 v[i][j] -= factor * v[p][j]
     return total, rank
+
+
+@dataclass(frozen=True)
+class History:
+    """One subject: the states it turned to by tenure (unique, ascending), observed after ``entry`` up to ``end``."""
+
+    turns: tuple[tuple[int, str], ...]
+    end: int
+    entry: int = 0
+
+
+@dataclass(frozen=True)
+class StateRow:
+    """One state at one duration; ``share`` is None where nobody was seen at tenure 0."""
+
+    state: str
+    duration: int
+    at_risk: int
+    arrivals: int
+    departures: int
+    share: Fraction | None
+
+
+def state_shares(histories: Sequence[History], states: Sequence[str]) -> list[StateRow]:
+    """Compute Aalen and Johansen's shares of several states, at each duration at which a stay ends."""
+    stays: list[tuple[str, int, int, str | None]] = []
+    start: dict[str, int] = defaultdict(int)
+    for history in histories:
+        entry = max(history.entry, history.turns[0][0])
+        ends = [*(t for t, _ in history.turns[1:]), history.end]
+        nexts = [*(state for _, state in history.turns[1:]), None]
+        for (begin, state), end, following in zip(history.turns, ends, nexts, strict=True):
+            if begin == entry == 0:
+                start[state] += 1
+            if end > max(begin, entry):
+                stays.append((state, max(begin, entry), end, following))
+    seen = sum(start.values())
+    shares = {state: Fraction(start[state], seen) if seen else None for state in states}
+    rows = []
+    for t in sorted({0, *(end for _, _, end, _ in stays)}):
+        n = {g: sum(s == g and b < t <= e for s, b, e, _ in stays) for g in states}
+        moves = {
+            (g, h): sum(s == g and e == t and f == h for s, _, e, f in stays) for g in states for h in states if g != h
+        }
+        if t and seen:
+            before = dict(shares)
+            for h in states:
+                value = Fraction(0)
+                for g in states:
+                    away = sum(moves[g, x] for x in states if x != g)
+                    hazard = (n[g] - away if g == h else moves[g, h]) / Fraction(n[g]) if n[g] else Fraction(int(g == h))
+                    value += before[g] * hazard
+                shares[h] = value
+        for state in states:
+            rows.append(
+                StateRow(
+                    state,
+                    t,
+                    n[state] if t else start[state],
+                    sum(moves[g, state] for g in states if g != state),
+                    sum(moves[state, h] for h in states if h != state),
+                    shares[state],
+                )
+            )
+    return rows
