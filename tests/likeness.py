@@ -33,7 +33,9 @@ def in_order(rows: Iterable[dict[str, Any]]) -> list[dict[str, Any]]:
 
     def place(row: dict[str, Any]) -> list[tuple[bool, str, str]]:
         return [
-            (value is None, type(value).__name__, str(value)) for value in row.values() if not isinstance(value, float)
+            (value is None, type(value).__name__, str(value))
+            for value in row.values()
+            if not isinstance(value, float)
         ]
 
     return sorted(({name: plain(value) for name, value in row.items()} for row in rows), key=place)
@@ -71,7 +73,9 @@ def unlike(engine: Engine, duckdb: Engine, case: Case) -> list[str]:
     if engine.keeps_milliseconds:
         right, given = ([[in_milliseconds(row) for row in rows] for rows in some] for some in (right, given))
     found = [
-        line for call, one, other in zip(case.calls, right, given, strict=True) for line in differences(call, one, other)
+        line
+        for call, one, other in zip(case.calls, right, given, strict=True)
+        for line in differences(call, one, other)
     ]
     if not (case.may_be_empty or all(right)):
         found.append(f"{case.name}: a call gives no rows, so nothing was compared")

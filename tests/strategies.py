@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from hypothesis import strategies as st
 
-GROUPS = [None, "household", "individual", "O'Hara \"x\" é", ""]
+GROUPS = [None, "household", "individual", 'O\'Hara "x" é', ""]
 
 
 @st.composite

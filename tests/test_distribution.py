@@ -1,4 +1,4 @@
-"""How the curve's work spreads over a Spark cluster: what is shuffled depends on groups and durations, not on rows."""
+"""On a Spark cluster what is shuffled depends on groups and durations, not on the number of spells."""
 
 from __future__ import annotations
 

@@ -1,4 +1,4 @@
-"""The demo, the reference data and the consumer repo, built with all their tests on every engine: the same tables everywhere."""
+"""The demo, the reference data and the consumer repo, built and tested on every engine: the same tables."""
 
 from __future__ import annotations
 
@@ -69,7 +69,8 @@ sources:
 {{ config(materialized='incremental') }}
 select subject_id, spell_number, started_at, last_seen_at, entry, duration, event, cause, weight, plan
 from ({{ spellcurve.spells_from_intervals(
-    source('desk', 'memberships'), 'member_id', 'joined_on', 'left_on', cause='left_because', as_of='2024-06-30', carry='plan'
+    source('desk', 'memberships'), 'member_id', 'joined_on', 'left_on', cause='left_because',
+    as_of='2024-06-30', carry='plan'
 ) }}) as found
 {% if is_incremental() %}where subject_id is null{% endif %}
 """,
@@ -83,15 +84,19 @@ with lasting as (select entry, duration, event, weight from {{ ref('kept_spells'
 select duration, at_risk, survival from ({{ spellcurve.survival_curve('lasting') }}) as curve
 """,
 }
-# Elsewhere dbt takes an empty cell of a seed for null by itself; docs/warehouses.md tells Spark's users of this setting.
-DISPATCH = "\ndispatch:\n  - macro_namespace: dbt\n    search_order: [harrow_lane_analytics, spellcurve, dbt]\n"
+# Spark's users need this for seeds with empty cells (docs/warehouses.md); elsewhere it changes nothing.
+DISPATCH = (
+    "\ndispatch:\n  - macro_namespace: dbt\n    search_order: [harrow_lane_analytics, spellcurve, dbt]\n"
+)
 
 
 @pytest.fixture(scope="module")
 def consumer(tmp_path_factory) -> Path:
-    """A copy of the consumer repo, with models of more kinds, whose dependency points at this working tree."""
+    """A copy of the consumer repo, with models of more kinds, that depends on this working tree."""
     project = tmp_path_factory.mktemp("consumer") / "repo"
-    shutil.copytree(ROOT / "tests" / "consumer", project, ignore=shutil.ignore_patterns("dbt_packages", "target"))
+    shutil.copytree(
+        ROOT / "tests" / "consumer", project, ignore=shutil.ignore_patterns("dbt_packages", "target")
+    )
     (project / "packages.yml").write_text(f"packages:\n  - local: {ROOT}\n")
     with (project / "dbt_project.yml").open("a") as file:
         file.write(DISPATCH)

@@ -29,7 +29,7 @@ def random_spells(tables: int, seed: int, fractional: bool = False) -> list[dict
             rows.append(
                 {
                     "case id": number,
-                    "order": dice.choice([None, "", "household", "O'Hara \"x\" é\\n", "individual"]),
+                    "order": dice.choice([None, "", "household", 'O\'Hara "x" é\\n', "individual"]),
                     "entry": dice.randint(0, duration) if late and dice.random() < 0.6 else 0,
                     "PlanName": dice.choice(["Ä", "b"]),
                     "duration": duration,

@@ -5,8 +5,9 @@ from __future__ import annotations
 from datetime import date, datetime, timedelta
 from random import Random
 
-from corpus import Case, Table
 from strategies import AS_OF, DAYS, TIMES, UNREADABLE
+
+from corpus import Case, Table
 
 RAW = {
     "subject_key": "text",
@@ -96,11 +97,21 @@ FIRST = "'began', 'began', as_of='2024-03-31', cause='kind', recorded_at='writte
 DURATIONS = "'lengths', 'months', 'left', entry='waited', weight='stands for', carry='who'"
 CASES = [
     Case("builders on text", {"texts": Table(RAW, random_rows(150, 1955, typed=False))}, calls("texts")),
-    Case("builders on dates and timestamps", {"typed": Table(TYPED, random_rows(150, 1977, typed=True))}, calls("typed")),
+    Case(
+        "builders on dates and timestamps",
+        {"typed": Table(TYPED, random_rows(150, 1977, typed=True))},
+        calls("typed"),
+    ),
     Case(
         "time to first event",
-        {"origins": Table(RAW, random_rows(80, 1981, False)), "happenings": Table(RAW, random_rows(80, 1982, False))},
-        [f"spells_to_first_event('origins', 'happenings', 'subject_key', {FIRST}, rows='{r}')" for r in ("sound", "faulty")],
+        {
+            "origins": Table(RAW, random_rows(80, 1981, False)),
+            "happenings": Table(RAW, random_rows(80, 1982, False)),
+        },
+        [
+            f"spells_to_first_event('origins', 'happenings', 'subject_key', {FIRST}, rows='{r}')"
+            for r in ("sound", "faulty")
+        ],
     ),
     Case(
         "durations",

@@ -1,4 +1,4 @@
-"""These tests need the adapters of many warehouses; `make portability` runs them in an environment of their own."""
+"""These tests need the adapters of many warehouses; `make portability` runs them in their own environment."""
 
 import sys
 from pathlib import Path

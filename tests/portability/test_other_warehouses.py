@@ -1,4 +1,4 @@
-"""Snowflake, BigQuery, Redshift, Databricks, Trino and Athena by translation, ClickHouse on its library: DuckDB's figures."""
+"""DuckDB's figures: on six warehouses by translation, and on the library of ClickHouse."""
 
 from __future__ import annotations
 

@@ -1,4 +1,4 @@
-"""Warehouses whose server is not here: compiled for their adapter, then run on a library of the engine or on DuckDB by translation."""
+"""Warehouses whose server is not here: compiled for their adapter, run on a library or by translation."""
 
 from __future__ import annotations
 
@@ -8,14 +8,20 @@ from collections.abc import Iterable
 from datetime import datetime
 from functools import cached_property
 from pathlib import Path
-from typing import Any
+from typing import Any, ClassVar
 
 import sqlglot
 from harness import DuckDB, Engine, Rows
 from sqlglot import ErrorLevel
 
 DUMMIES: dict[str, dict[str, Any]] = {
-    "snowflake": {"account": "none", "user": "none", "password": "none", "database": "db", "warehouse": "none"},
+    "snowflake": {
+        "account": "none",
+        "user": "none",
+        "password": "none",
+        "database": "db",
+        "warehouse": "none",
+    },
     "bigquery": {"method": "oauth-secrets", "token": "none", "project": "none"},
     "redshift": {"host": "none", "user": "none", "password": "none", "dbname": "db", "port": 5439},
     "databricks": {"host": "none", "http_path": "none", "token": "none", "catalog": "db"},
@@ -51,7 +57,7 @@ class ClickHouse(Engine):
     """SQL compiled for the adapter, run unchanged on the engine's own library."""
 
     name = "clickhouse"
-    types = {
+    types: ClassVar[dict[str, str]] = {
         "bigint": "Nullable(Int64)",
         "double": "Nullable(Float64)",
         "text": "Nullable(String)",
@@ -60,7 +66,11 @@ class ClickHouse(Engine):
         "boolean": "Nullable(Bool)",
     }
     #: docs/warehouses.md asks users to put these into their profile's custom_settings.
-    settings = {"prefer_column_name_to_alias": 1, "cast_keep_nullable": 1, "join_use_nulls": 1}
+    settings: ClassVar[dict[str, int]] = {
+        "prefer_column_name_to_alias": 1,
+        "cast_keep_nullable": 1,
+        "join_use_nulls": 1,
+    }
 
     def output(self) -> dict[str, Any]:
         return {"type": self.name, "schema": "spellcurve_tests", "threads": 1} | DUMMIES[self.name]
