@@ -164,7 +164,7 @@ changes_numbered as (
 cells_named as (
     select
         {{ each_group }}duration, own_cause, own_number, events, all_events, is_step, at_risk,
-        case when place = 1 then units_on + 1 else own_number end as cause_number
+        case when place = 1 then {{ spellcurve._integer('units_on + 1') }} else {{ spellcurve._integer('own_number') }} end as cause_number
     from cells
 ),
 
