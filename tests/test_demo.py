@@ -9,7 +9,7 @@ import duckdb
 import pandas as pd
 import pytest
 from lifelines import KaplanMeierFitter
-from lifelines.utils import median_survival_times
+from lifelines.utils import median_survival_times, restricted_mean_survival_time
 from spellcurve import __version__, demo, generate, summary
 from spellcurve.cli import app
 from typer.testing import CliRunner
@@ -111,7 +111,7 @@ def test_seeds_loaded_by_dbt_are_the_generator_s_tables(tmp_path):
 def test_demo_agrees(small):
     _, printed = small
     assert printed.exit_code == 0, printed.output
-    assert "✓ 9 curves" in printed.output
+    assert "✓ 9 curves and 14 read-outs: " in printed.output
     assert "✗" not in printed.output
 
 
@@ -163,6 +163,7 @@ def check_group(spells: pd.DataFrame, group: summary.GroupFigures) -> None:
     found = [group.half.duration, group.half.lower, group.half.upper]
     assert [float("inf") if one is None else one for one in found] == expected
     assert group.follow_up == spells["duration"].max()
+    check_average(spells, group)
     for share in group.shares:
         if share.duration > group.follow_up and fitted.survival_function_.iloc[-1, 0] > 0:
             assert share == summary.ShareAt(share.duration, None, None, None, summary.BEYOND_FOLLOW_UP)
@@ -173,6 +174,45 @@ def check_group(spells: pd.DataFrame, group: summary.GroupFigures) -> None:
             assert [share.lower, share.upper] == pytest.approx(list(bounds), rel=1e-9)
 
 
+def check_average(spells: pd.DataFrame, group: summary.GroupFigures) -> None:
+    """The macro's mean is that of the spells that outlast duration 0: the area divided by survival there."""
+    average = group.average
+    fitted = KaplanMeierFitter().fit(spells["duration"], spells["event"], entry=spells["entry"])
+    if average.horizon > group.follow_up and fitted.survival_function_.iloc[-1, 0] > 0:
+        unknown = summary.AverageWithin(average.horizon, None, None, None, summary.BEYOND_FOLLOW_UP)
+        assert average == unknown
+        return
+    assert average.status == summary.OBSERVED
+    area = restricted_mean_survival_time(fitted, average.horizon)
+    assert average.mean == pytest.approx(area / fitted.predict(0), rel=1e-9)
+    assert 0 <= average.lower <= average.mean <= average.upper <= average.horizon
+
+
+def test_every_read_out_that_is_printed_was_compared(small, small_result):
+    readouts = {readout.model: readout.exact for readout in small_result.readouts}
+    for answer in small_result.answers:
+        for reading in answer.question.readings:
+            for model, figures in ((reading.shares, 8), (reading.quantiles, 4), (reading.means, 5)):
+                with duckdb.connect(str(small[0] / demo.DATABASE)) as connection:
+                    rows = connection.execute(f"select count(*) from {demo.SCHEMA}.{model}").fetchone()[0]
+                assert readouts[model].rows == rows > 0
+                assert readouts[model].figures == figures * rows
+    figures = sum(table.exact.figures for table in small_result.tables)
+    assert f"{figures:,} figures compared with exact fractions" in " ".join(small[1].output.split())
+
+
+def test_young_cohorts_have_cells_that_have_not_matured(small):
+    with duckdb.connect(str(small[0] / demo.DATABASE)) as connection:
+        cohorts = connection.execute(
+            f"select cohort, duration, status, survival from {demo.SCHEMA}.demo_membership_cohorts"
+        ).df()
+    assert set(cohorts["status"]) == {"observed", "beyond_follow_up"}
+    assert (cohorts["survival"].isna() == (cohorts["status"] == "beyond_follow_up")).all()
+    assert cohorts["cohort"].min() == pd.Timestamp("2020-07-01")  # since when memberships were watched
+    observed = cohorts[cohorts["status"] == "observed"].groupby("cohort")["duration"].max()
+    assert observed.iloc[0] == 1095 > observed.iloc[-2]
+
+
 def test_printed_figures_are_the_result_s(small, small_result):
     text = " ".join(small[1].output.split())
     assert "400 members are on its books" in text
@@ -180,7 +220,8 @@ def test_printed_figures_are_the_result_s(small, small_result):
     for answer in small_result.answers:
         assert answer.question.title in text
         for group in answer.groups:
-            assert summary.half_in_words(group) in text
+            assert summary.half_in_words(group.half) in text
+            assert summary.average_in_words(group.average) in text
             assert all(summary.share_in_words(share) in text for share in group.shares)
 
 
@@ -232,6 +273,68 @@ def test_a_missing_row_gives_exit_status_1(copied):
     printed = run("demo", "--folder", copied, "--check-only")
     assert printed.exit_code == 1
     assert "is missing from the table" in " ".join(printed.output.split())
+
+
+#: What can go wrong in a read-out, and what has to be said about it.
+SPOILT = {
+    "update demo_membership_shares set survival = survival * (1 + 2e-9) where duration = 90": (
+        "survival at duration 90 is"
+    ),
+    "update demo_membership_shares_by_plan set status = 'beyond_follow_up' where duration = 365": (
+        "status at plan household, duration 365 is beyond_follow_up, but observed is expected."
+    ),
+    "update demo_part_shares set survival = null where part = 'planer knife' and duration = 500": (
+        "survival at part planer knife, duration 500 is null, but "
+    ),
+    "update demo_part_quantiles set duration = 9999 where part = 'drive belt' and share = 0.5": (
+        "duration at part drive belt, share 0.5 is 9999, but null is expected."
+    ),
+    "update demo_membership_quantiles set duration_upper = duration_upper + 1 where share = 0.5": (
+        "duration_upper at share 0.5 is"
+    ),
+    "update demo_first_loan_means set restricted_mean_lower = 0 where plan = 'household'": (
+        "restricted_mean_lower at plan household, horizon 365 is 0.0, but"
+    ),
+    "update demo_membership_means set std_error = 'nan'": "std_error at horizon 365 is nan, but",
+    "delete from demo_membership_means_by_plan where plan = 'individual'": (
+        "The row at plan individual, horizon 365 is missing from the table."
+    ),
+    "insert into demo_part_shares select * from demo_part_shares where duration = 100": (
+        "The row at part drive belt, duration 100 is in the table more than once."
+    ),
+    "update demo_first_loan_quantiles set share = 0.6 where share = 0.5": (
+        "The row at plan household, share 0.6 should not be in the table."
+    ),
+    "update demo_membership_cohorts set naive_event_share = 0 where cohort = '2021-01-01'": (
+        "naive_event_share at cohort 2021-01-01, duration 730 is 0.0, but"
+    ),
+    "update demo_membership_hazards set hazard_upper = 1 where from_duration = 0": (
+        "hazard_upper at plan household, from_duration 0 is 1.0, but"
+    ),
+}
+
+
+def test_whatever_is_wrong_in_a_read_out_is_found(copied):
+    for sql in SPOILT:
+        spoil(copied, sql)
+    result = demo.run_demo(copied, check_only=True)
+    assert not result.agrees
+    for sql, says in SPOILT.items():
+        table = next(word for word in sql.split() if word.startswith("demo_"))
+        assert any(sentence.startswith(says) for sentence in result.disagreements[table]), says
+    assert not any(curve.wrong for curve in result.checked)
+
+
+def test_a_wrong_read_out_is_printed_as_it_stands_and_gives_exit_status_1(copied):
+    spoil(copied, "update demo_membership_shares set survival = 0.123 where duration = 90")
+    spoil(copied, "update demo_membership_means set restricted_mean = 12, restricted_mean_lower = 3")
+    spoil(copied, "update demo_membership_quantiles set duration = 4321 where share = 0.5")
+    printed = run("demo", "--folder", copied, "--check-only")
+    assert printed.exit_code == 1
+    assert all(words in printed.output for words in ("12.3% (", "12 (3 to ", "4,321 ("))
+    assert "✗ 9 curves and 14 read-outs" in printed.output
+    assert "demo_membership_shares: 1 figures or rows disagree" in printed.output
+    assert "survival at duration 90 is 0.123, but" in " ".join(printed.output.split())
 
 
 def test_a_lost_source_row_gives_exit_status_1_through_the_tests(copied):
@@ -312,50 +415,67 @@ def test_wrong_options_give_exit_status_2(arguments):
     assert run("demo", *arguments).exit_code == 2
 
 
-def rows(*points: tuple[int, float | None, float | None, float | None]) -> list[dict]:
-    return [
-        dict(zip(("duration", "survival", "survival_lower", "survival_upper"), one, strict=True))
-        for one in points
-    ]
-
-
-FALLING = rows((0, 1.0, 1.0, 1.0), (4, 0.8, 0.6, 0.9), (9, 0.5 * (1 + 1e-12), 0.3, 0.7), (12, 0.4, 0.2, 0.6))
-
-
-def test_half_is_reached_at_the_level_itself_despite_rounding():
-    group = summary.figures("all", FALLING, 10, 4, [4])
-    assert group.half == summary.TimeToHalf(9, 9, None, summary.REACHED)
-    assert summary.half_in_words(group) == "9 (9 or more)"
-    ended = summary.figures("all", [*FALLING, *rows((20, 0.1, 0.01, 0.5))], 10, 4, [4])
-    assert summary.half_in_words(ended) == "9 (9 to 20)"
-
-
-def test_half_not_reached_is_said():
-    group = summary.figures("all", FALLING[:2], 10, 9, [])
-    assert group.half == summary.TimeToHalf(None, None, None, summary.NOT_REACHED)
-    assert summary.half_in_words(group) == "not reached"
+def row_of_half(duration: int | None, lower: int | None, upper: int | None, status: str) -> dict:
+    return {
+        "share": 0.5,
+        "duration": duration,
+        "duration_lower": lower,
+        "duration_upper": upper,
+        "status": status,
+    }
 
 
 @pytest.mark.parametrize(
-    ("duration", "words"),
+    ("row", "words"),
     [
-        (0, "100.0%"),
-        (3, "100.0%"),
-        (4, "80.0% (60.0 to 90.0)"),
-        (12, "40.0% (20.0 to 60.0)"),
-        (13, "not yet observable"),
+        (row_of_half(9, 9, 20, "reached"), "9 (9 to 20)"),
+        (row_of_half(1009, 999, None, "reached"), "1,009 (999 or more)"),
+        (row_of_half(9, None, None, "reached"), "9"),
+        (row_of_half(None, 9, None, "not_reached"), "not reached"),
+        (row_of_half(None, None, None, "too_few_at_risk"), "too few at risk"),
+        ({**row_of_half(3, 2, 4, "reached"), "share": 0.25}, "missing from the table"),
     ],
 )
-def test_shares_are_read_as_steps_and_not_beyond_follow_up(duration, words):
-    assert summary.share_in_words(summary.share_at(FALLING, duration)) == words
+def test_half_in_words(row, words):
+    assert summary.half_in_words(summary.time_to_half([row])) == words
 
 
-def test_a_share_that_has_reached_0_stays_known():
-    curve = [*FALLING, *rows((20, 0.0, None, None))]
-    assert summary.share_at(curve, 500) == summary.ShareAt(500, 0.0, None, None, summary.OBSERVED)
-    assert summary.share_in_words(summary.share_at(curve, 500)) == "0.0%"
+@pytest.mark.parametrize(
+    ("survival", "lower", "upper", "status", "words"),
+    [
+        (0.8, 0.6, 0.9, "observed", "80.0% (60.0 to 90.0)"),
+        (1.0, 1.0, 1.0, "observed", "100.0%"),
+        (0.0, None, None, "observed", "0.0%"),
+        (None, None, None, "beyond_follow_up", "not yet observable"),
+        (None, None, None, "too_few_at_risk", "too few at risk"),
+        (None, None, None, "several_curves", "several curves in one"),
+    ],
+)
+def test_shares_in_words(survival, lower, upper, status, words):
+    row = {"survival": survival, "survival_lower": lower, "survival_upper": upper, "status": status}
+    found = summary.share_at([{"duration": 3, **row}, {"duration": 30, **row}], 30)
+    assert found == summary.ShareAt(30, survival, lower, upper, status)
+    assert summary.share_in_words(found) == words
+    assert summary.share_in_words(summary.share_at([], 30)) == "missing from the table"
 
 
-def test_hidden_estimates_are_not_made_up():
-    curve = [*FALLING, *rows((20, None, None, None))]
-    assert summary.share_in_words(summary.share_at(curve, 20)) == "not yet observable"
+@pytest.mark.parametrize(
+    ("mean", "lower", "upper", "status", "words"),
+    [
+        (310.86, 306.6, 1315.1, "observed", "311 (307 to 1,315)"),
+        (365.0, 365.0, 365.0, "observed", "365"),
+        (310.86, None, None, "observed", "311"),
+        (None, None, None, "beyond_follow_up", "not yet observable"),
+        (None, None, None, "none_survived", "nobody left"),
+    ],
+)
+def test_averages_in_words(mean, lower, upper, status, words):
+    row = {
+        "horizon": 365,
+        "restricted_mean": mean,
+        "restricted_mean_lower": lower,
+        "restricted_mean_upper": upper,
+    }
+    found = summary.average_within([{**row, "status": status}], 365)
+    assert summary.average_in_words(found) == words
+    assert summary.average_within([], 365).status == summary.MISSING

@@ -21,7 +21,15 @@ from rich.table import Table
 from spellcurve import __version__
 from spellcurve.compare import TOLERANCE
 from spellcurve.generate import DEFAULT_MEMBERS, DEFAULT_SEED, FEWEST_MEMBERS, MOST_MEMBERS
-from spellcurve.summary import faults_in_words, half_in_words, share_in_words
+from spellcurve.summary import (
+    BEYOND_FOLLOW_UP,
+    NOT_REACHED,
+    average_in_words,
+    faults_in_words,
+    half_in_words,
+    share_in_words,
+    status_in_words,
+)
 
 if TYPE_CHECKING:
     from spellcurve.demo import Answer, DemoResult, Step
@@ -139,7 +147,7 @@ def _print_result(out: Console, result: DemoResult) -> None:
     )
     for answer in result.answers:
         _print_answer(out, answer)
-    out.print("\n[dim]In brackets: 95% interval of each figure by itself.[/]")
+    _print_how_to_read(out, result)
     _print_refusals(out, result)
     _print_agreement(out, result)
     _print_where(out, result)
@@ -158,15 +166,37 @@ def _print_answer(out: Console, answer: Answer) -> None:
     table.add_row("spells", *(f"{group.spells:,}" for group in answer.groups))
     table.add_row("still going", *(f"{group.open_spells:,}" for group in answer.groups))
     table.add_row("followed for", *(f"{group.follow_up:,} {question.unit}" for group in answer.groups))
-    table.add_row(f"{question.half_means}", *map(half_in_words, answer.groups))
+    table.add_row(f"{question.half_means}", *(half_in_words(group.half) for group in answer.groups))
     for place, duration in enumerate(question.durations):
         table.add_row(
             f"{question.survival_means} {duration:,} {question.unit}",
             *(share_in_words(group.shares[place]) for group in answer.groups),
         )
+    table.add_row(
+        f"average {question.unit} within {question.horizon:,}",
+        *(average_in_words(group.average) for group in answer.groups),
+    )
     out.print(f"\n[bold]{question.title}[/]")
     out.print(f"[dim]{question.note}[/]")
     out.print(Padding(table, (0, 0, 0, 2)))
+
+
+def _print_how_to_read(out: Console, result: DemoResult) -> None:
+    groups = [group for answer in result.answers for group in answer.groups]
+    seen = {status for group in groups for status in group.statuses}
+    sentences = [
+        "In brackets: 95% interval of each figure by itself.",
+        "Average: a spell that outlasts duration 0 counts up to its event or that day or hour at most.",
+    ]
+    for status, why in (
+        (NOT_REACHED, "the curve has not come down to a half by the end of follow-up."),
+        (BEYOND_FOLLOW_UP, "nobody has been followed for that long."),
+    ):
+        if status in seen:
+            sentences.append(f"{status_in_words(status).capitalize()}: {why}")
+    out.print()
+    for sentence in sentences:
+        out.print(f"[dim]{sentence}[/]")
 
 
 def _plain_table() -> Table:
@@ -193,10 +223,11 @@ def _print_refusals(out: Console, result: DemoResult) -> None:
 
 def _print_agreement(out: Console, result: DemoResult) -> None:
     out.print("\n[bold]Are the figures right?[/]")
-    exact = sum(curve.exact.figures for curve in result.checked)
+    exact = sum(table.exact.figures for table in result.tables)
     independent = sum(one.figures for curve in result.checked for one in curve.independent)
     out.print(
-        f"{_tick(not result.disagreements)} {len(result.checked)} curves: {exact:,} figures compared with "
+        f"{_tick(not result.disagreements)} {len(result.checked)} curves and {len(result.readouts)} "
+        f"read-outs: {exact:,} figures compared with "
         f"exact fractions, {independent:,} with lifelines; "
         f"largest relative difference {result.largest_difference:.1e} (allowed {_short_power(TOLERANCE)})."
     )
@@ -225,6 +256,7 @@ def _print_where(out: Console, result: DemoResult) -> None:
     table.add_row("file", escape(str(database)))
     table.add_row("schema", result.schema)
     table.add_row("curves", ", ".join(curve.model for curve in result.checked))
+    table.add_row("read-outs", ", ".join(readout.model for readout in result.readouts))
     table.add_row("spells", ", ".join(refusals.spells for refusals in result.refusals))
     table.add_row("refused rows", "beside each spell table, under its name with _faulty")
     table.add_row("records", ", ".join(result.records))

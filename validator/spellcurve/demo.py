@@ -1,11 +1,11 @@
-"""Builds the demo on a DuckDB file, checks every curve of it and gathers what there is to tell."""
+"""Builds the demo on a DuckDB file, checks its curves and read-outs and gathers what there is to tell."""
 
 from __future__ import annotations
 
 import json
 import os
 import shutil
-from collections.abc import Callable, Iterator, Mapping, Sequence
+from collections.abc import Callable, Collection, Iterator, Mapping, Sequence
 from contextlib import AbstractContextManager, contextmanager, nullcontext
 from dataclasses import dataclass
 from datetime import date, timedelta
@@ -15,12 +15,12 @@ from typing import Any
 import duckdb
 from dbt.cli.main import dbtRunner
 
-from spellcurve import generate
+from spellcurve import compare_readouts, generate
 from spellcurve.compare import Comparison, compare_curves
-from spellcurve.exact import Spell, group_spells, survival_curves
+from spellcurve.exact import CurveRow, Spell, group_spells, survival_curves
 from spellcurve.independent import independent_curves
 from spellcurve.provenance import Provenance, first_provenance
-from spellcurve.summary import GroupFigures, figures
+from spellcurve.summary import GroupFigures, average_within, share_at, time_to_half
 
 DATABASE = "tool_library.duckdb"
 SCHEMA = "harrow_lane"
@@ -46,17 +46,29 @@ class DemoError(Exception):
 
 
 @dataclass(frozen=True)
+class Reading:
+    """A curve with the column that splits it, and the tables of its read-outs."""
+
+    curve: str
+    by: str | None
+    shares: str
+    quantiles: str
+    means: str
+
+
+@dataclass(frozen=True)
 class Question:
-    """One thing the summary tells: curves with how they are split, their spells, durations to read."""
+    """One thing the summary tells: read-outs, their spells, durations to tell of, horizon of the average."""
 
     title: str
     note: str
     unit: str
     survival_means: str
     half_means: str
-    curves: tuple[tuple[str, str | None], ...]
+    readings: tuple[Reading, ...]
     spells: str
     durations: tuple[int, ...]
+    horizon: int
 
 
 QUESTIONS = (
@@ -68,9 +80,25 @@ QUESTIONS = (
         "days",
         "still members after",
         "half have left by day",
-        (("demo_membership_survival", None), ("demo_membership_survival_by_plan", "plan")),
+        (
+            Reading(
+                "demo_membership_survival",
+                None,
+                "demo_membership_shares",
+                "demo_membership_quantiles",
+                "demo_membership_means",
+            ),
+            Reading(
+                "demo_membership_survival_by_plan",
+                "plan",
+                "demo_membership_shares_by_plan",
+                "demo_membership_quantiles_by_plan",
+                "demo_membership_means_by_plan",
+            ),
+        ),
         "demo_membership_spells",
         (30, 90, 365),
+        365,
     ),
     Question(
         "How soon do they borrow their first tool?",
@@ -78,9 +106,18 @@ QUESTIONS = (
         "days",
         "nothing borrowed after",
         "half have borrowed by day",
-        (("demo_first_loan_survival", "plan"),),
+        (
+            Reading(
+                "demo_first_loan_survival",
+                "plan",
+                "demo_first_loan_shares",
+                "demo_first_loan_quantiles",
+                "demo_first_loan_means",
+            ),
+        ),
         "demo_first_loan_spells",
         (7, 30, 365),
+        365,
     ),
     Question(
         "How long do parts of the workshop's machines last?",
@@ -88,9 +125,14 @@ QUESTIONS = (
         "hours",
         "not worn out after",
         "half are worn out by hour",
-        (("demo_part_survival", "part"),),
+        (
+            Reading(
+                "demo_part_survival", "part", "demo_part_shares", "demo_part_quantiles", "demo_part_means"
+            ),
+        ),
         "demo_part_spells",
         (100, 500, 1_000),
+        1_000,
     ),
 )
 
@@ -154,6 +196,24 @@ class CheckedCurve:
 
 
 @dataclass(frozen=True)
+class CheckedReadout:
+    """A read-out's table compared with exact fractions."""
+
+    model: str
+    exact: Comparison
+
+    @property
+    def comparisons(self) -> tuple[Comparison, ...]:
+        """The one comparison."""
+        return (self.exact,)
+
+    @property
+    def wrong(self) -> list[str]:
+        """A sentence about every figure that is wrong."""
+        return [one.sentence for one in self.exact.disagreements]
+
+
+@dataclass(frozen=True)
 class DemoResult:
     """Everything the demo found."""
 
@@ -166,19 +226,25 @@ class DemoResult:
     answers: tuple[Answer, ...]
     refusals: tuple[Refusals, ...]
     checked: tuple[CheckedCurve, ...]
+    readouts: tuple[CheckedReadout, ...]
     tests_run: int
     tests_failed: tuple[str, ...]
     records: tuple[str, ...] = generate.TABLES
 
     @property
+    def tables(self) -> tuple[CheckedCurve | CheckedReadout, ...]:
+        """All tables that were compared, curves first."""
+        return (*self.checked, *self.readouts)
+
+    @property
     def disagreements(self) -> dict[str, list[str]]:
-        """A sentence about every figure that is wrong, by curve; curves without any are left out."""
-        return {curve.model: curve.wrong for curve in self.checked if curve.wrong}
+        """A sentence about every figure that is wrong, by table; tables without any are left out."""
+        return {table.model: table.wrong for table in self.tables if table.wrong}
 
     @property
     def largest_difference(self) -> float:
         """Largest relative difference of any figure from what it should be."""
-        return max(one.largest_difference for curve in self.checked for one in curve.comparisons)
+        return max(one.largest_difference for table in self.tables for one in table.comparisons)
 
     @property
     def agrees(self) -> bool:
@@ -212,14 +278,16 @@ def run_demo(
         with step(f"Writing the records of {members:,} members"):
             demo.prepare()
             demo.write_records(members, seed)
-        with step("Building spells and curves with dbt"):
+        with step("Building spells, curves and read-outs with dbt"):
             demo.dbt("run", "--select", "path:models/demo")
     with step("Running the package's tests with dbt"):
         tests = demo.dbt("test", "--select", "path:models/demo")
     with step("Recomputing every curve with lifelines and in exact fractions"):
         checked = demo.check_curves()
-    with step("Reading off the figures"):
-        return demo.result(checked, tests)
+    with step("Recomputing what is read off them in exact fractions"):
+        readouts = demo.check_readouts()
+    with step("Gathering the figures"):
+        return demo.result(checked, readouts, tests)
 
 
 def find_project() -> Path:
@@ -256,6 +324,7 @@ class _Demo:
         self.database = folder / DATABASE
         self.compiled = folder / "target" / "compiled" / "spellcurve" / "models" / "demo"
         self.project = find_project()
+        self.exact_curves: dict[str, dict[tuple[Any, ...], list[CurveRow]]] = {}
 
     def prepare(self) -> None:
         """Makes the folder and its profile, and removes the database of an earlier run."""
@@ -361,22 +430,43 @@ class _Demo:
 
     def _compiled_curves(self) -> dict[str, Provenance]:
         """Every compiled model that is a survival curve, by name."""
-        curves = {}
+        return self._compiled_calls(("survival_curve",))
+
+    def _compiled_calls(self, macros: Collection[str]) -> dict[str, Provenance]:
+        """Every compiled model that is a call of one of these macros, by name."""
+        calls = {}
         for path in sorted(self.compiled.glob("*/demo_*.sql")):
-            provenance = first_provenance(path.read_text(encoding="utf-8"), "survival_curve", path.stem)
-            if provenance is not None:
-                curves[path.stem] = provenance
-        return curves
+            provenance = first_provenance(path.read_text(encoding="utf-8"), where=path.stem)
+            if provenance is not None and provenance.macro in macros:
+                calls[path.stem] = provenance
+        return calls
 
     def check_curves(self) -> tuple[CheckedCurve, ...]:
         """Recomputes every curve from its spells, as aggregated by the database, and compares all figures."""
+        checked = []
+        with self._connect() as connection:
+            for model, provenance in self._compiled_curves().items():
+                options = {
+                    name: provenance.options[name] for name in _CURVE_OPTIONS if name in provenance.options
+                }
+                spells = _spells(connection, provenance)
+                self.exact_curves[model] = survival_curves(spells, **options)
+                checked.append(
+                    _check_curve(connection, model, provenance, spells, self.exact_curves[model], options)
+                )
+        return tuple(checked)
+
+    def check_readouts(self) -> tuple[CheckedReadout, ...]:
+        """Recomputes the read-outs from the exact curves that `check_curves` left, or from spells."""
         with self._connect() as connection:
             return tuple(
-                _check_curve(connection, model, provenance)
-                for model, provenance in self._compiled_curves().items()
+                _check_readout(connection, model, provenance, self.exact_curves)
+                for model, provenance in self._compiled_calls(compare_readouts.KEYS).items()
             )
 
-    def result(self, checked: tuple[CheckedCurve, ...], tests: Sequence[Any]) -> DemoResult:
+    def result(
+        self, checked: tuple[CheckedCurve, ...], readouts: tuple[CheckedReadout, ...], tests: Sequence[Any]
+    ) -> DemoResult:
         """Gathers the figures from the tables."""
         with self._connect() as connection:
             return DemoResult(
@@ -389,6 +479,7 @@ class _Demo:
                 answers=tuple(_answer(connection, question) for question in QUESTIONS),
                 refusals=tuple(_refusals(connection, *known) for known in SOURCES.items()),
                 checked=checked,
+                readouts=readouts,
                 tests_run=len(tests),
                 tests_failed=tuple(one.node.name for one in tests if one.status not in ("pass", "warn")),
             )
@@ -417,19 +508,57 @@ def _count(connection: duckdb.DuckDBPyConnection, table: str, where: str = "true
     return int(rows[0]["counted"])
 
 
-def _check_curve(connection: duckdb.DuckDBPyConnection, model: str, provenance: Provenance) -> CheckedCurve:
+def _spells(
+    connection: duckdb.DuckDBPyConnection, provenance: Provenance
+) -> dict[tuple[Any, ...], list[Spell]]:
+    """The spells that a model reads, as aggregated by the database; a cohort comes first in its groups."""
     by = provenance.by
-    options = {name: provenance.options[name] for name in _CURVE_OPTIONS if name in provenance.options}
-    columns = ", ".join([*_quoted(by), "entry", "duration", "event"])
-    spells = group_spells(
-        Spell(row["entry"], row["duration"], row["event"], int(row["weight"]), None, _group(row, by))
-        for row in _rows(
-            connection, f"select {columns}, sum(weight) as weight from {provenance.spells} group by {columns}"
+    expressions = _quoted(by)
+    if cohort := provenance.options.get("cohort"):
+        period, column = provenance.options["period"], _quoted([cohort])[0]
+        by = ("cohort", *by)
+        expressions.insert(
+            0,
+            f"cast(date_trunc('{period}', {column}) as date) as cohort" if period else f"{column} as cohort",
         )
+    columns = ", ".join([*expressions, "entry", "duration", "event"])
+    rows = _rows(connection, f"select {columns}, sum(weight) as weight from {provenance.spells} group by all")
+    return group_spells(
+        Spell(row["entry"], row["duration"], row["event"], int(row["weight"]), None, _group(row, by))
+        for row in rows
     )
+
+
+def _check_curve(
+    connection: duckdb.DuckDBPyConnection,
+    model: str,
+    provenance: Provenance,
+    spells: Mapping[tuple[Any, ...], list[Spell]],
+    expected: Mapping[tuple[Any, ...], Sequence[CurveRow]],
+    options: Mapping[str, Any],
+) -> CheckedCurve:
+    by = provenance.by
     published = _rows(connection, f"select * from {_table(model)}")
-    exact = compare_curves(published, survival_curves(spells, **options), by)
+    exact = compare_curves(published, expected, by)
     return CheckedCurve(model, exact, _compare_with_lifelines(published, spells, by, options))
+
+
+def _check_readout(
+    connection: duckdb.DuckDBPyConnection,
+    model: str,
+    provenance: Provenance,
+    curves: Mapping[str, Mapping[tuple[Any, ...], Sequence[CurveRow]]],
+) -> CheckedReadout:
+    macro, options, by = provenance.macro, provenance.options, provenance.by
+    if macro in compare_readouts.OF_CURVES:
+        curve = options["curve"].rsplit(".", 1)[-1].strip('"')
+        expected = compare_readouts.of_curves(macro, curves[curve], options)
+    else:
+        expected = compare_readouts.of_spells(macro, _spells(connection, provenance), options)
+        by = ("cohort", *by) if macro == "cohort_readout" else by
+    published = _rows(connection, f"select * from {_table(model)}")
+    names = (*by, *compare_readouts.KEYS[macro])
+    return CheckedReadout(model, compare_readouts.compare_readouts(published, expected, names))
 
 
 def _group(row: Mapping[str, Any], by: Sequence[str]) -> tuple[Any, ...]:
@@ -453,27 +582,41 @@ def _compare_with_lifelines(
 
 
 def _answer(connection: duckdb.DuckDBPyConnection, question: Question) -> Answer:
-    groups: list[GroupFigures] = []
-    for curve, by in question.curves:
-        label = f'"{by}"' if by else "'everybody'"
+    groups = []
+    for reading in question.readings:
+        label = f'"{reading.by}"' if reading.by else "'everybody'"
         counted = _rows(
             connection,
             f"select {label} as label, count(*) as spells, sum(1 - event) as still_open "
             f"from {_table(question.spells)} group by 1 order by 1",
         )
-        rows = _rows(
+        ends = _rows(
             connection,
-            f"select {label} as label, duration, survival, survival_lower, survival_upper "
-            f"from {_table(curve)} order by duration",
+            f"select {label} as label, max(duration) as last from {_table(reading.curve)} group by 1",
+        )
+        follow_up = {row["label"]: row["last"] for row in ends}
+        shares, quantiles, means = (
+            _rows(connection, f"select {label} as label, * from {_table(name)}")
+            for name in (reading.shares, reading.quantiles, reading.means)
         )
         for group in counted:
-            own = [row for row in rows if row["label"] == group["label"]]
+            own = group["label"]
             groups.append(
-                figures(
-                    str(group["label"]), own, group["spells"], int(group["still_open"]), question.durations
+                GroupFigures(
+                    str(own),
+                    group["spells"],
+                    int(group["still_open"]),
+                    int(follow_up.get(own, 0)),
+                    time_to_half(_of(own, quantiles)),
+                    tuple(share_at(_of(own, shares), duration) for duration in question.durations),
+                    average_within(_of(own, means), question.horizon),
                 )
             )
     return Answer(question, tuple(groups))
+
+
+def _of(label: Any, rows: Rows) -> Rows:
+    return [row for row in rows if row["label"] == label]
 
 
 def _refusals(connection: duckdb.DuckDBPyConnection, spells: str, sources: tuple[str, ...]) -> Refusals:

@@ -1,16 +1,26 @@
-"""What a curve says, read off its published rows, and the plain words for it."""
+"""What published read-outs say of each group, and the plain words for it."""
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections import defaultdict
+from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
 from typing import Any
 
 OBSERVED, BEYOND_FOLLOW_UP = "observed", "beyond_follow_up"
 REACHED, NOT_REACHED = "reached", "not_reached"
+#: Of a read-out whose table has no row for it.
+MISSING = "missing"
 
-#: exp(sum(ln)) lands beside round values; a level counts as reached within this relative distance.
-LEVEL_TOLERANCE = 1e-9
+#: What is told in place of a figure that is not there.
+STATUS_IN_WORDS = {
+    BEYOND_FOLLOW_UP: "not yet observable",
+    NOT_REACHED: "not reached",
+    "too_few_at_risk": "too few at risk",
+    "none_survived": "nobody left",
+    "several_curves": "several curves in one",
+    MISSING: "missing from the table",
+}
 
 #: What the builders' fault codes mean, for somebody who has not read the documentation.
 FAULTS_IN_WORDS = {
@@ -54,7 +64,7 @@ FAULTS_IN_WORDS = {
 
 @dataclass(frozen=True)
 class ShareAt:
-    """Share whose event has not happened by a duration; figures None where status is BEYOND_FOLLOW_UP.
+    """Share whose event has not happened by a duration; figures None unless status is OBSERVED.
 
     The bounds alone are None where survival is 0.
     """
@@ -70,12 +80,26 @@ class ShareAt:
 class TimeToHalf:
     """First duration at which half have had the event, with Brookmeyer and Crowley's limits.
 
-    `duration` is None where status is NOT_REACHED; a limit is None where its bound stays above a half.
+    `duration` is None unless status is REACHED; a limit is None where its bound stays above a half.
     """
 
     duration: int | None
     lower: int | None
     upper: int | None
+    status: str
+
+
+@dataclass(frozen=True)
+class AverageWithin:
+    """Restricted mean of the spells that outlast 0: average units up to the event, or to the horizon.
+
+    Figures are None unless status is OBSERVED.
+    """
+
+    horizon: int
+    mean: float | None
+    lower: float | None
+    upper: float | None
     status: str
 
 
@@ -86,70 +110,53 @@ class GroupFigures:
     label: str
     spells: int
     open_spells: int
+    follow_up: int
     half: TimeToHalf
     shares: tuple[ShareAt, ...]
-    follow_up: int
+    average: AverageWithin
+
+    @property
+    def statuses(self) -> frozenset[str]:
+        """The statuses of all its read-outs."""
+        return frozenset((self.half.status, *(share.status for share in self.shares), self.average.status))
 
 
-def share_at(curve: Sequence[Mapping[str, Any]], duration: int) -> ShareAt:
-    """Read the share still there at a duration off one group's curve.
-
-    Args:
-        curve: rows with duration, survival, survival_lower and survival_upper, in order of duration.
-        duration: whole units.
-    """
-    passed = [row for row in curve if row["duration"] <= duration]
-    if not passed:
-        return ShareAt(duration, None, None, None, BEYOND_FOLLOW_UP)
-    row = passed[-1]
-    watched = duration <= curve[-1]["duration"] or row["survival"] == 0
-    if not watched or row["survival"] is None:
-        return ShareAt(duration, None, None, None, BEYOND_FOLLOW_UP)
-    return ShareAt(duration, row["survival"], row["survival_lower"], row["survival_upper"], OBSERVED)
-
-
-def time_to_half(curve: Sequence[Mapping[str, Any]]) -> TimeToHalf:
-    """Read the median and its limits off one group's curve (rows as for `share_at`).
-
-    Source: Brookmeyer and Crowley 1982; each is the first duration at which survival, or a bound
-    of it, is at or below a half.
-    """
-    middle = _first_at_or_below(curve, "survival", 0.5)
-    return TimeToHalf(
-        middle,
-        _first_at_or_below(curve, "survival_lower", 0.5),
-        _first_at_or_below(curve, "survival_upper", 0.5),
-        NOT_REACHED if middle is None else REACHED,
+def share_at(rows: Iterable[Mapping[str, Any]], duration: int) -> ShareAt:
+    """Find the share still there at a duration in one group's rows of `survival_at`."""
+    row = _row(rows, "duration", duration)
+    return ShareAt(
+        duration, row["survival"], row["survival_lower"], row["survival_upper"], row["status"] or MISSING
     )
 
 
-def _first_at_or_below(curve: Sequence[Mapping[str, Any]], column: str, level: float) -> int | None:
-    for row in curve:
-        value = row[column]
-        if value is not None and value <= level * (1 + LEVEL_TOLERANCE):
-            return int(row["duration"])
-    return None
+def time_to_half(rows: Iterable[Mapping[str, Any]]) -> TimeToHalf:
+    """Find the median and its limits in one group's rows of `survival_quantiles`."""
+    row = _row(rows, "share", 0.5)
+    return TimeToHalf(row["duration"], row["duration_lower"], row["duration_upper"], row["status"] or MISSING)
 
 
-def figures(
-    label: str, curve: Sequence[Mapping[str, Any]], spells: int, open_spells: int, durations: Sequence[int]
-) -> GroupFigures:
-    """Put together what is told of one group, whose curve has at least its row at 0."""
-    return GroupFigures(
-        label,
-        spells,
-        open_spells,
-        time_to_half(curve),
-        tuple(share_at(curve, duration) for duration in durations),
-        int(curve[-1]["duration"]),
+def average_within(rows: Iterable[Mapping[str, Any]], horizon: int) -> AverageWithin:
+    """Find the average up to a horizon in one group's rows of `restricted_mean`."""
+    row = _row(rows, "horizon", horizon)
+    return AverageWithin(
+        horizon,
+        row["restricted_mean"],
+        row["restricted_mean_lower"],
+        row["restricted_mean_upper"],
+        row["status"] or MISSING,
     )
 
 
-def half_in_words(group: GroupFigures) -> str:
+def _row(rows: Iterable[Mapping[str, Any]], column: str, value: float) -> Mapping[str, Any]:
+    """Find the row for one value; a row of nothing but None where there is none."""
+    nothing: Mapping[str, Any] = defaultdict(lambda: None)
+    return next((row for row in rows if row[column] == value), nothing)
+
+
+def half_in_words(half: TimeToHalf) -> str:
     """For instance '441 (398 to 463)', '441 (398 or more)' or 'not reached'."""
-    half = group.half
     if half.duration is None:
-        return "not reached"
+        return status_in_words(half.status)
     if half.lower is None:
         return f"{half.duration:,}"
     limits = f"{half.lower:,} or more" if half.upper is None else f"{half.lower:,} to {half.upper:,}"
@@ -159,10 +166,24 @@ def half_in_words(group: GroupFigures) -> str:
 def share_in_words(share: ShareAt) -> str:
     """For instance '74.3% (72.1 to 76.3)' or 'not yet observable'; no interval at 0 and at 1."""
     if share.survival is None:
-        return "not yet observable"
+        return status_in_words(share.status)
     if share.lower is None or share.upper is None or share.survival == 1:
         return percent(share.survival)
     return f"{percent(share.survival)} ({100 * share.lower:.1f} to {100 * share.upper:.1f})"
+
+
+def average_in_words(average: AverageWithin) -> str:
+    """For instance '311 (307 to 315)' or 'not yet observable'; no interval where nothing happened."""
+    if average.mean is None:
+        return status_in_words(average.status)
+    if average.lower is None or average.upper is None or average.lower == average.upper:
+        return f"{average.mean:,.0f}"
+    return f"{average.mean:,.0f} ({average.lower:,.0f} to {average.upper:,.0f})"
+
+
+def status_in_words(status: str) -> str:
+    """What a read-out's status means, for somebody who has not read the documentation."""
+    return STATUS_IN_WORDS.get(status, status.replace("_", " "))
 
 
 def percent(share: float) -> str:

@@ -1,0 +1,1 @@
+{{ spellcurve.survival_quantiles(ref('demo_part_survival'), shares=[0.5], by=['part']) }}
