@@ -41,8 +41,12 @@ def check(engine, columns, rows, by, **options):
 
 @given(rows=spell_rows(largest=17), options=st.sampled_from(OPTIONS), by=st.sampled_from([[], ["plan"]]))
 @example(rows=[], options=OPTIONS[0], by=["plan"])
-@example(rows=[{"plan": "a", "entry": 2, "duration": 3, "event": 1, "weight": 1}], options={"width": 5}, by=[])
-@example(rows=[{"plan": "a", "entry": 9, "duration": 9, "event": 1, "weight": 1}], options={"width": 3}, by=[])
+@example(
+    rows=[{"plan": "a", "entry": 2, "duration": 3, "event": 1, "weight": 1}], options={"width": 5}, by=[]
+)
+@example(
+    rows=[{"plan": "a", "entry": 9, "duration": 9, "event": 1, "weight": 1}], options={"width": 3}, by=[]
+)
 @settings(max_examples=250)
 def test_whole_weights(engine, rows, options, by):
     check(engine, WHOLE, rows, by, **options)
@@ -56,7 +60,13 @@ def test_fractional_weights(engine, rows):
 
 def test_a_billion_spells(engine):
     rows = [
-        {"plan": "a", "entry": d // 3 if d % 5 == 0 else 0, "duration": d, "event": int(d % 3 == 0), "weight": 333_333 + 7919 * d % 4001}
+        {
+            "plan": "a",
+            "entry": d // 3 if d % 5 == 0 else 0,
+            "duration": d,
+            "event": int(d % 3 == 0),
+            "weight": 333_333 + 7919 * d % 4001,
+        }
         for d in range(3_000)
     ]
     check(engine, WHOLE, rows, [], width=7)
@@ -73,11 +83,15 @@ def grouped(bands: list[tuple[int, int, int]]) -> list[dict]:
 
 
 def test_cutler_and_ederers_kidney_cancer_patients(engine):
-    """126 patients with localized kidney cancer: Cutler, S. J. and Ederer, F. (1958). Maximum utilization of the
-    life table method in analyzing survival. Journal of Chronic Diseases 8, 699-712. Data and figures from memory.
+    """126 patients with localized kidney cancer: Cutler, S. J. and Ederer, F. (1958). Maximum
+    utilization of the
+    life table method in analyzing survival. Journal of Chronic Diseases 8, 699-712. Data and figures
+    from memory.
     Lost and withdrawn are added together, as the method does.
     """
-    engine.load("spells", WHOLE, grouped([(0, 47, 19), (1, 5, 17), (2, 2, 15), (3, 2, 9), (4, 0, 6), (5, 0, 4)]))
+    engine.load(
+        "spells", WHOLE, grouped([(0, 47, 19), (1, 5, 17), (2, 2, 15), (3, 2, 9), (4, 0, 6), (5, 0, 4)])
+    )
     rows = engine.run("actuarial_table('spells', width=1, horizon=5)")
     assert [row["entering"] for row in rows] == [126, 60, 38, 21, 10]
     assert [row["exposed"] for row in rows] == [116.5, 51.5, 30.5, 16.5, 7.0]
@@ -91,7 +105,10 @@ def test_cutler_and_ederers_kidney_cancer_patients(engine):
     [
         ("'spells'", "argument 'width' is missing; give a number"),
         ("'spells', width=0", "width is 0; it must be a whole number of at least 1"),
-        ("'spells', width=7, horizon=30", "horizon is 30 and width is 7; horizon must be a whole number of bands"),
+        (
+            "'spells', width=7, horizon=30",
+            "horizon is 30 and width is 7; horizon must be a whole number of bands",
+        ),
         ("'spells', width=7, by='exposed'", "by names the column 'exposed', which the result uses itself"),
     ],
 )

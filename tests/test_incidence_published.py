@@ -13,15 +13,46 @@ from test_incidence import WHOLE, call, close
 
 DATA = Path(__file__).parent / "data"
 
-# 35 patients after a stem cell transplant for acute leukaemia, in months: 1 died of the transplant, 2 relapsed, 0 neither.
-# Scrucca, L., Santucci, A. and Aversa, F. (2007). Competing risk analysis using R: an easy guide for clinicians. Bone Marrow
-# Transplantation 40, 381-387. Data as carried by scikit-survival 0.28.0 (load_bmt): (months, status, patients).
+# 35 patients after a stem cell transplant for acute leukaemia, in months: 1 died of the transplant, 2
+# relapsed, 0 neither.
+# Scrucca, L., Santucci, A. and Aversa, F. (2007). Competing risk analysis using R: an easy guide for
+# clinicians. Bone Marrow
+# Transplantation 40, 381-387. Data as carried by scikit-survival 0.28.0 (load_bmt): (months, status,
+# patients).
 TRANSPLANTS = [
-    (0, 1, 1), (0, 2, 1), (1, 1, 1), (1, 2, 1), (2, 0, 1), (2, 2, 1), (3, 1, 3), (3, 2, 1), (4, 0, 1), (4, 1, 2),
-    (4, 2, 1), (5, 2, 1), (7, 0, 1), (7, 2, 2), (8, 0, 1), (8, 1, 1), (8, 2, 1), (9, 2, 1), (10, 2, 1), (12, 1, 1),
-    (13, 2, 1), (14, 2, 1), (22, 2, 1), (26, 2, 1), (32, 0, 1), (35, 0, 2), (67, 0, 1), (68, 0, 1), (70, 0, 1), (72, 0, 1),
-]  # fmt: skip
-# (cause, duration, incidence, bounds) as computed by scikit-survival 0.28.0, cumulative_incidence_competing_risks with
+    (0, 1, 1),
+    (0, 2, 1),
+    (1, 1, 1),
+    (1, 2, 1),
+    (2, 0, 1),
+    (2, 2, 1),
+    (3, 1, 3),
+    (3, 2, 1),
+    (4, 0, 1),
+    (4, 1, 2),
+    (4, 2, 1),
+    (5, 2, 1),
+    (7, 0, 1),
+    (7, 2, 2),
+    (8, 0, 1),
+    (8, 1, 1),
+    (8, 2, 1),
+    (9, 2, 1),
+    (10, 2, 1),
+    (12, 1, 1),
+    (13, 2, 1),
+    (14, 2, 1),
+    (22, 2, 1),
+    (26, 2, 1),
+    (32, 0, 1),
+    (35, 0, 2),
+    (67, 0, 1),
+    (68, 0, 1),
+    (70, 0, 1),
+    (72, 0, 1),
+]
+# (cause, duration, incidence, bounds) as computed by scikit-survival 0.28.0,
+# cumulative_incidence_competing_risks with
 # conf_type='log-log' and var_type='Dinse_Approx' (the delta method of Dinse and Larson 1986); 12 decimals.
 TRANSPLANT_FIGURES = [
     (1, 0, 0.028571428571, 0.002195356172, 0.126822720725),
@@ -54,24 +85,39 @@ def load(engine, rows: list[tuple[int, int, int]]) -> None:
         "spells",
         WHOLE,
         [
-            {"entry": 0, "duration": t, "event": int(status > 0), "cause": str(status) if status else None, "weight": n}
+            {
+                "entry": 0,
+                "duration": t,
+                "event": int(status > 0),
+                "cause": str(status) if status else None,
+                "weight": n,
+            }
             for t, status, n in rows
         ],
     )
 
 
 def melanoma() -> list[tuple[int, int, int]]:
-    """205 patients operated on for melanoma: where they are from is said in test_incidence_comparisons. 2 here: other causes."""
+    """205 patients operated on for melanoma: where they are from is said in test_incidence_comparisons. 2
+    here: other causes.
+    """
     with (DATA / "melanoma.csv").open() as file:
-        return [(int(row["time"]), {"1": 1, "2": 0, "3": 2}[row["status"]], 1) for row in csv.DictReader(file)]
+        return [
+            (int(row["time"]), {"1": 1, "2": 0, "3": 2}[row["status"]], 1) for row in csv.DictReader(file)
+        ]
 
 
 @pytest.mark.parametrize(
-    ("rows", "figures"), [(TRANSPLANTS, TRANSPLANT_FIGURES), (melanoma(), MELANOMA_FIGURES)], ids=["transplants", "melanoma"]
+    ("rows", "figures"),
+    [(TRANSPLANTS, TRANSPLANT_FIGURES), (melanoma(), MELANOMA_FIGURES)],
+    ids=["transplants", "melanoma"],
 )
 def test_two_open_data_sets_against_scikit_survival(engine, rows, figures):
     load(engine, rows)
-    found = {(row["cause"], row["duration"]): row for row in engine.run(call("cumulative_incidence", [], grid="every"))}
+    found = {
+        (row["cause"], row["duration"]): row
+        for row in engine.run(call("cumulative_incidence", [], grid="every"))
+    }
     for cause, duration, *expected in figures:
         row = found[str(cause), duration]
         for name, value in zip(("incidence", "incidence_lower", "incidence_upper"), expected, strict=True):
@@ -79,7 +125,8 @@ def test_two_open_data_sets_against_scikit_survival(engine, rows, figures):
 
 
 def test_melanoma_figures_in_print(engine):
-    """Estimate and standard error at 1,000 to 4,000 days, as the R package cmprsk gives them and courses print them; from memory.
+    """Estimate and standard error at 1,000 to 4,000 days, as the R package cmprsk gives them and
+    courses print them; from memory.
     Its variance is Aalen's, which the delta method meets here to the printed third place.
     """
     printed = {
@@ -90,14 +137,18 @@ def test_melanoma_figures_in_print(engine):
     engine.make("incidences", call("cumulative_incidence", []))
     for row in engine.run("incidence_at('incidences', [1000, 2000, 3000, 4000])"):
         assert round(row["incidence"], 3) == printed[row["cause"]][row["duration"]][0]
-    found = {(row["cause"], row["duration"]): row for row in engine.run(call("cumulative_incidence", [], grid="every"))}
+    found = {
+        (row["cause"], row["duration"]): row
+        for row in engine.run(call("cumulative_incidence", [], grid="every"))
+    }
     for cause, figures in printed.items():
         for duration, (_, error) in figures.items():
             assert round(found[cause, duration]["std_error"], 3) == error
 
 
 def test_lifelines_on_untied_data(engine):
-    """Its Aalen-Johansen estimator moves tied durations at random, so there are none here. Its variance is 0 times infinity
+    """Its Aalen-Johansen estimator moves tied durations at random, so there are none here. Its variance
+    is 0 times infinity
     where the last one at risk ends, so that one is censored.
     """
     dice = Random(1978)
@@ -107,7 +158,9 @@ def test_lifelines_on_untied_data(engine):
     found = {(row["cause"], row["duration"]): row for row in engine.run(call("cumulative_incidence", []))}
     for cause in (1, 2):
         fitter = AalenJohansenFitter(calculate_variance=True)
-        fitter.fit(pd.Series([t for t, _, _ in rows]), pd.Series([s for _, s, _ in rows]), event_of_interest=cause)
+        fitter.fit(
+            pd.Series([t for t, _, _ in rows]), pd.Series([s for _, s, _ in rows]), event_of_interest=cause
+        )
         for t, incidence in fitter.cumulative_density_.iloc[:, 0].items():
             row = found[str(cause), int(t)]
             assert abs(row["incidence"] - incidence) < 1e-10

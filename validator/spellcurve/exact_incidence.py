@@ -14,7 +14,7 @@ from __future__ import annotations
 from collections import defaultdict
 from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass
-from decimal import Context, Decimal, localcontext
+from decimal import Context, localcontext
 from fractions import Fraction
 
 from spellcurve.exact import (
@@ -59,7 +59,10 @@ def cumulative_incidence(
         causes: cause to label, for those that are wanted (several causes may share a label); None for every
             cause that an event at risk has.
         others: ``competing``, or ``censored`` to treat every other cause as censoring.
-        confidence, interval_scale, horizon, grid: as for ``exact.survival_curve``.
+        confidence: as for ``exact.survival_curve``.
+        interval_scale: as for ``exact.survival_curve``.
+        horizon: as for ``exact.survival_curve``.
+        grid: as for ``exact.survival_curve``.
 
     Returns:
         rows by cause and duration.
@@ -232,7 +235,9 @@ def actuarial_table(spells: Sequence[Spell], width: int, horizon: int | None = N
         if survival:
             with localcontext(Context(prec=_DIGITS)):
                 error = float(to_decimal(survival) * to_decimal(greenwood).sqrt())
-        rows.append(TableRow(low, high, entering, censored, exposed, events, hazard, survival, greenwood, error))
+        rows.append(
+            TableRow(low, high, entering, censored, exposed, events, hazard, survival, greenwood, error)
+        )
     return rows
 
 
@@ -242,7 +247,7 @@ def _weight(spells: Iterable[Spell]) -> Fraction:
 
 @dataclass(frozen=True)
 class Unit:
-    """One subject, or ``weight`` identical ones: its spells as (entry, duration), and the tenures of its events."""
+    """One subject, or ``weight`` identical ones: spells as (entry, duration), and the tenures of events."""
 
     spells: tuple[tuple[int, int], ...]
     events: tuple[int, ...]
@@ -267,7 +272,8 @@ def mean_cumulative_count(
     """Compute Nelson's mean cumulative count of one group; each event must be at risk in a spell of its unit.
 
     The robust variance is the sum over units of the square of the sum over u <= t of
-    (events of the unit - its spells at risk * d/n) / n (Lawless and Nadeau 1995); the naive one the sum of d/n².
+    (events of the unit - its spells at risk * d/n) / n (Lawless and Nadeau 1995); the naive one is
+    the sum of d/n².
     """
     if not units:
         return []
@@ -295,7 +301,9 @@ def mean_cumulative_count(
                 own = sum(entry < t <= end or entry == t == 0 for entry, end in unit.spells)
                 scores[i] += (unit.events.count(t) - own * d / n) / n
         if t in shown:
-            robust = sum((unit.weight * score**2 for unit, score in zip(units, scores, strict=True)), Fraction(0))
+            robust = sum(
+                (unit.weight * score**2 for unit, score in zip(units, scores, strict=True)), Fraction(0)
+            )
             rows.append(CountRow(t, n, d, mean, robust, naive))
     return rows
 
@@ -313,7 +321,8 @@ class GrayTest:
 def gray_test(groups: Sequence[Sequence[Spell]], causes: Iterable[str]) -> GrayTest:
     """Compare the incidence of some causes between groups (Gray 1988, with all moments weighted alike).
 
-    A group counts while someone in it is at risk and its survival is above 0. As if no other cause took anyone,
+    A group counts while someone in it is at risk and its survival is above 0. As if no other cause took
+    anyone,
     reach = at risk / survival; the pooled incidence rises by events / reach of all groups. Ties are corrected
     for as in the hypergeometric variance.
     """
@@ -382,7 +391,7 @@ class _State:
 
 
 class _Course:
-    """One group as Gray's test sees it: numbers, survival and incidence (before the moment) at any duration."""
+    """One group as Gray's test sees it: numbers, survival and incidence just before any duration."""
 
     def __init__(self, spells: Sequence[Spell], wanted: set[str]) -> None:
         self.own: dict[int, Fraction] = defaultdict(Fraction)
@@ -392,7 +401,10 @@ class _Course:
                 cause = "unknown" if spell.cause is None else spell.cause
                 (self.own if cause in wanted else self.others)[spell.duration] += Fraction(spell.weight)
         self.at_risk = _at_risk_counter(spells)
-        everyone = {t: self.own.get(t, Fraction(0)) + self.others.get(t, Fraction(0)) for t in (*self.own, *self.others)}
+        everyone = {
+            t: self.own.get(t, Fraction(0)) + self.others.get(t, Fraction(0))
+            for t in (*self.own, *self.others)
+        }
         self.steps = incidence_steps(self.at_risk, dict(self.own), everyone)
 
     def state(self, t: int) -> _State:
@@ -430,7 +442,7 @@ def quadratic_form(
 
 @dataclass(frozen=True)
 class History:
-    """One subject: the states it turned to by tenure (unique, ascending), observed after ``entry`` up to ``end``."""
+    """One subject: the states it turned to, by ascending tenure, observed after ``entry`` up to ``end``."""
 
     turns: tuple[tuple[int, str], ...]
     end: int
@@ -463,12 +475,15 @@ def state_shares(histories: Sequence[History], states: Sequence[str]) -> list[St
             if end > max(begin, entry):
                 stays.append((state, max(begin, entry), end, following))
     seen = sum(start.values())
-    shares = {state: Fraction(start[state], seen) if seen else None for state in states}
+    shares = {state: Fraction(start[state], seen or 1) for state in states}
     rows = []
     for t in sorted({0, *(end for _, _, end, _ in stays)}):
         n = {g: sum(s == g and b < t <= e for s, b, e, _ in stays) for g in states}
         moves = {
-            (g, h): sum(s == g and e == t and f == h for s, _, e, f in stays) for g in states for h in states if g != h
+            (g, h): sum(s == g and e == t and f == h for s, _, e, f in stays)
+            for g in states
+            for h in states
+            if g != h
         }
         if t and seen:
             before = dict(shares)
@@ -476,7 +491,11 @@ def state_shares(histories: Sequence[History], states: Sequence[str]) -> list[St
                 value = Fraction(0)
                 for g in states:
                     away = sum(moves[g, x] for x in states if x != g)
-                    hazard = (n[g] - away if g == h else moves[g, h]) / Fraction(n[g]) if n[g] else Fraction(int(g == h))
+                    hazard = (
+                        (n[g] - away if g == h else moves[g, h]) / Fraction(n[g])
+                        if n[g]
+                        else Fraction(int(g == h))
+                    )
                     value += before[g] * hazard
                 shares[h] = value
         for state in states:
@@ -487,7 +506,7 @@ def state_shares(histories: Sequence[History], states: Sequence[str]) -> list[St
                     n[state] if t else start[state],
                     sum(moves[g, state] for g in states if g != state),
                     sum(moves[state, h] for h in states if h != state),
-                    shares[state],
+                    shares[state] if seen else None,
                 )
             )
     return rows
