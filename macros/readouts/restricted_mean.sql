@@ -32,6 +32,8 @@
     {%- set each_group = spellcurve._each_then_comma(groups) -%}
     {%- set partition = spellcurve._partition_by(groups + ['horizon']) -%}
     {%- set z = spellcurve._double_literal(spellcurve._normal_quantile(0.5 + confidence / 2)) -%}
+    {#- the mean of all who began takes in those whose event came at 0; the mean of who survived is theirs alone -#}
+    {%- set of_all = survived == 0 -%}
     {%- set body -%}
 with {{ spellcurve._curve_rows(curve, by) }},
 
@@ -41,7 +43,11 @@ with {{ spellcurve._curve_rows(curve, by) }},
 pieces as (
     select
         {{ each_group }}horizon, duration, next_duration, survival, next_survival, is_several_curves, last_duration, ended_at,
+        {% if of_all -%}
+        {{ spellcurve._greenwood_step() }} as greenwood_step,
+        {%- else -%}
         case when duration > {{ survived }} then {{ spellcurve._greenwood_step() }} else 0 end as greenwood_step,
+        {%- endif %}
         case when {{ spellcurve._is_in_force(survived) }} then 1 else 0 end as is_base,
         case
             when duration >= horizon then 0
@@ -76,7 +82,7 @@ sums as (
         min(duration) as first_duration,
         max(is_gap) as has_gaps,
         max(case when area_after > 0 and greenwood_step is null then 1 else 0 end) as lacks_counts,
-        max(case when is_base = 1 then survival end) as survival_so_far,
+        max(case when is_base = 1 then {{ spellcurve._double('1') if of_all else 'survival' }} end) as survival_so_far,
         sum(survival * width) as area,
         sum(area_after * area_after * greenwood_step) as variance
     from pieces_with_areas
@@ -90,7 +96,9 @@ sums_with_status as (
         case
             when is_several_curves = 1 then 'several_curves'
             when first_duration > {{ survived }} then 'beyond_follow_up'
+            {%- if not of_all %}
             when ended_at <= {{ survived }} then 'none_survived'
+            {%- endif %}
             when last_duration < horizon and ended_at is null then 'beyond_follow_up'
             when has_gaps = 1 then 'too_few_at_risk'
             else 'observed'

@@ -186,7 +186,7 @@ def _print_how_to_read(out: Console, result: DemoResult) -> None:
     seen = {status for group in groups for status in group.statuses}
     sentences = [
         "In brackets: 95% interval of each figure by itself.",
-        "Average: a spell that outlasts duration 0 counts up to its event or that day or hour at most.",
+        "Average: a spell counts up to its event, or up to that day or hour at most.",
     ]
     for status, why in (
         (NOT_REACHED, "the curve has not come down to a half by the end of follow-up."),

@@ -147,10 +147,11 @@ def _first_below(rows: Sequence[CurveRow], name: str, level: Fraction) -> tuple[
 def restricted_mean(
     rows: Sequence[CurveRow], horizon: int, survived: int = 0, confidence: float = 0.95
 ) -> RestrictedMean:
-    """Compute the expected time between ``survived`` and the horizon of those who survived so far.
+    """Compute the expected time up to the horizon: of all, or from ``survived`` on of those who got there.
 
     The variance is the sum of A² d / (n (n - d)) over the events in between, A being the area under the
-    curve from the event to the horizon, divided by survival at ``survived``.
+    curve from the event to the horizon; mean and root are divided by survival at ``survived``. With
+    ``survived`` 0 nothing is divided, and events at 0 count: it is the mean of all who began.
 
     Args:
         rows: as for ``survival_at``.
@@ -159,7 +160,7 @@ def restricted_mean(
         confidence: level of the interval.
     """
     ended_at = _ended_at(rows)
-    if ended_at <= survived:
+    if survived and ended_at <= survived:
         return RestrictedMean(horizon, None, None, None, None, NONE_SURVIVED)
     if rows[-1].duration < horizon and ended_at > rows[-1].duration:
         return RestrictedMean(horizon, None, None, None, None, BEYOND_FOLLOW_UP)
@@ -173,11 +174,12 @@ def restricted_mean(
     areas.reverse()
     variance = Fraction(0)
     for row in rows:
-        if survived < row.duration < min(horizon, ended_at) and row.events:
+        after = survived < row.duration or not survived
+        if after and row.duration < min(horizon, ended_at) and row.events:
             n, d = row.at_risk, row.events
             assert n is not None
             variance += areas[row.duration - survived] ** 2 * d / (n * (n - d))
-    base = shares[0]
+    base = shares[0] if survived else Fraction(1)
     assert base
     mean = areas[0] / base
     with localcontext(Context(prec=60)):

@@ -91,7 +91,7 @@ class TimeToHalf:
 
 @dataclass(frozen=True)
 class AverageWithin:
-    """Restricted mean of the spells that outlast 0: average units up to the event, or to the horizon.
+    """Restricted mean: average units up to the event, or to the horizon where that comes first.
 
     Figures are None unless status is OBSERVED.
     """
