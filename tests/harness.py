@@ -72,7 +72,9 @@ class Engine:
         return [self._rendered[call] for call in calls]
 
     def _compile(self, inline: str) -> str:
-        outcome, said = self.dbt(["compile", "--no-introspect", "--no-populate-cache", "--inline", inline])
+        outcome, said = self.dbt(
+            ["compile", "--no-write-json", "--no-introspect", "--no-populate-cache", "--inline", inline]
+        )
         if not outcome.success:
             raise CompilationError("\n".join([str(outcome.exception), *said]))
         return outcome.result.results[0].node.compiled_code
