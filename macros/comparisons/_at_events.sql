@@ -52,8 +52,8 @@
         ) -%}
     {%- endif -%}
     {%- set p, q = found.group(1) | float, found.group(2) | float -%}
-    {%- if p > 20 or q > 20 -%}
-        {%- do spellcurve._fail(caller_name, "weighting is '" ~ weighting ~ "'; p and q must not be above 20.") -%}
+    {%- if p > 5 or q > 5 -%}
+        {%- do spellcurve._fail(caller_name, "weighting is '" ~ weighting ~ "'; p and q must not be above 5.") -%}
     {%- endif -%}
     {%- set kind = 'log-rank' if p == 0 and q == 0 else 'fleming-harrington' -%}
     {{ return({'kind': kind, 'p': p, 'q': q, 'shown': 'fleming-harrington(' ~ found.group(1) ~ ', ' ~ found.group(2) ~ ')'}) }}
