@@ -4,6 +4,10 @@ Everything is written straight from its definition, at whatever cost: a variance
 source prints. Roots, logarithms and normal quantiles are worked out with 60 decimal digits and rounded to a
 float at the very end.
 
+Numerators and denominators grow with every duration, and double sums with their square. For long tables the
+functions therefore take ``digits``: sums are then kept to so many significant digits and, where a definition
+is a sum over all pairs, multiplied out into running sums.
+
 Sources: Aalen and Johansen 1978, with the variance of Marubini and Valsecchi 1995 (cumulative incidence);
 Cutler and Ederer 1958 (life table); Nelson 1988 and Lawless and Nadeau 1995 (mean cumulative count);
 Gray 1988 (comparison of incidences).
@@ -11,7 +15,8 @@ Gray 1988 (comparison of incidences).
 
 from __future__ import annotations
 
-from collections import defaultdict
+from bisect import bisect_left, bisect_right
+from collections import Counter, defaultdict
 from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from decimal import Context, localcontext
@@ -51,6 +56,7 @@ def cumulative_incidence(
     interval_scale: str = "log-log",
     horizon: int | None = None,
     grid: str = "steps",
+    digits: int | None = None,
 ) -> list[IncidenceRow]:
     """Compute the incidence of each cause for one group of spells.
 
@@ -63,6 +69,7 @@ def cumulative_incidence(
         interval_scale: as for ``exact.survival_curve``.
         horizon: as for ``exact.survival_curve``.
         grid: as for ``exact.survival_curve``.
+        digits: see the module's description; None for all.
 
     Returns:
         rows by cause and duration.
@@ -84,7 +91,7 @@ def cumulative_incidence(
     for label in sorted(set(labels)):
         own = ends[label]
         competing = all_ends if others == "competing" else own
-        rows += _incidence_rows(label, spells, own, competing, shown, confidence, interval_scale)
+        rows += _incidence_rows(label, spells, own, competing, shown, confidence, interval_scale, digits)
     return rows
 
 
@@ -96,14 +103,23 @@ def _incidence_rows(
     shown: Sequence[int],
     confidence: float,
     interval_scale: str,
+    digits: int | None,
 ) -> list[IncidenceRow]:
     at_risk = _at_risk_counter(spells)
-    steps = incidence_steps(at_risk, own, all_ends)
+    steps = incidence_steps(at_risk, own, all_ends, digits)
+    variances = running_variances(steps, digits) if digits else []
+    complete = not any(step.survival_before and step.d > step.own for step in steps)
     rows = []
     for t in shown:
-        until = [step for step in steps if step.duration <= t]
-        incidence = until[-1].incidence if until else Fraction(0)
-        variance = incidence_variance(until) if incidence != 1 else None
+        reached = bisect_right(steps, t, key=lambda step: step.duration)
+        incidence = steps[reached - 1].incidence if reached else Fraction(0)
+        if complete and reached and not steps[reached - 1].survival:
+            incidence = Fraction(1)  # rounded sums may just miss it
+        variance: Fraction | None = Fraction(0)
+        if incidence == 1:
+            variance = None
+        elif reached:
+            variance = variances[reached - 1] if digits else incidence_variance(steps[:reached])
         std_error, lower, upper = share_uncertainty(incidence, variance, confidence, interval_scale)
         rows.append(
             IncidenceRow(
@@ -178,6 +194,30 @@ def incidence_variance(steps: Sequence[IncidenceStep], digits: int | None = None
             term += gained**2 * d / (n * (n - d)) - 2 * gained * before * own / n**2
         total = rounded(total + term, digits)
     return total
+
+
+def running_variances(steps: Sequence[IncidenceStep], digits: int | None) -> list[Fraction]:
+    """Return ``incidence_variance`` at every step, its squares multiplied out into running sums."""
+    sums = [Fraction(0)] * 6
+    variances = []
+    for step in steps:
+        n, d, own, before, incidence = step.n, step.d, step.own, step.survival_before, step.incidence
+        greenwood = d / (n * (n - d)) if n > d else Fraction(0)
+        mixed = before * own / n**2
+        added = (
+            greenwood,
+            incidence * greenwood,
+            incidence**2 * greenwood,
+            before**2 * own * (n - own) / n**3,
+            mixed,
+            incidence * mixed,
+        )
+        sums = [rounded(total + term, digits) for total, term in zip(sums, added, strict=True)]
+        g, ig, iig, a, b, ib = sums
+        variances.append(
+            rounded(incidence**2 * g - 2 * incidence * ig + iig + a - 2 * (incidence * b - ib), digits)
+        )
+    return variances
 
 
 def share_uncertainty(
@@ -267,13 +307,13 @@ class CountRow:
 
 
 def mean_cumulative_count(
-    units: Sequence[Unit], horizon: int | None = None, grid: str = "steps"
+    units: Sequence[Unit], horizon: int | None = None, grid: str = "steps", digits: int | None = None
 ) -> list[CountRow]:
     """Compute Nelson's mean cumulative count of one group; each event must be at risk in a spell of its unit.
 
     The robust variance is the sum over units of the square of the sum over u <= t of
     (events of the unit - its spells at risk * d/n) / n (Lawless and Nadeau 1995); the naive one is
-    the sum of d/n².
+    the sum of d/n². ``horizon`` only cuts rows. For ``digits`` see the module's description.
     """
     if not units:
         return []
@@ -284,11 +324,11 @@ def mean_cumulative_count(
     for unit in units:
         for tenure in unit.events:
             happened[tenure] += Fraction(unit.weight)
-    shown = shown_durations(everyone, grid, horizon)
-    if grid == "steps":
-        last = shown[-1] if horizon is not None else max(spell.duration for spell in everyone)
-        shown = sorted({*shown, *(tenure for tenure in happened if tenure <= last)})
+    every = {*shown_durations(everyone, grid, None), *happened}
+    shown = {duration for duration in every if horizon is None or duration <= horizon}
     at_risk = _at_risk_counter(everyone)
+    if digits:
+        return _counts_of_many(units, at_risk, happened, sorted(shown), digits)
     scores = [Fraction(0) for _ in units]
     mean, naive = Fraction(0), Fraction(0)
     rows: list[CountRow] = []
@@ -308,6 +348,64 @@ def mean_cumulative_count(
     return rows
 
 
+def _counts_of_many(
+    units: Sequence[Unit],
+    at_risk: Callable[[int], Fraction],
+    happened: Mapping[int, Fraction],
+    shown: Sequence[int],
+    digits: int,
+) -> list[CountRow]:
+    """Work the definition out in steps: a unit's score is a - r L.
+
+    r is the number of its spells at risk, L the naive variance. a changes by 1/n with each event of the unit,
+    by L where a spell of it enters and by -L where one has left. Sums over units of a², a r and r² therefore
+    change only where a unit's own a or r does.
+    """
+    # tenure to (unit, events, spells that begin to be at risk after it, spells that cease to be)
+    changes: dict[int, dict[int, list[int]]] = defaultdict(dict)
+    for i, unit in enumerate(units):
+        for tenure in unit.events:
+            changes[tenure].setdefault(i, [0, 0, 0])[0] += 1
+        for entry, end in unit.spells:
+            if entry < end or end == 0:
+                changes[entry].setdefault(i, [0, 0, 0])[1] += 1
+                changes[end].setdefault(i, [0, 0, 0])[2] += 1
+    a, r = [Fraction(0)] * len(units), [0] * len(units)
+    for i, unit in enumerate(units):
+        r[i] = sum(entry == 0 for entry, _ in unit.spells)
+    aa, ar = Fraction(0), Fraction(0)
+    rr = sum((Fraction(unit.weight) * r[i] ** 2 for i, unit in enumerate(units)), Fraction(0))
+    mean, naive = Fraction(0), Fraction(0)
+    rows: list[CountRow] = []
+    wanted = set(shown)
+    for t in sorted({*wanted, *changes}):
+        n, d = at_risk(t), happened.get(t, Fraction(0))
+        if d:
+            mean = rounded(mean + d / n, digits)
+            naive = rounded(naive + d / n**2, digits)
+        later = []
+        for i, (events, entering, leaving) in changes.get(t, {}).items():
+            weight = Fraction(units[i].weight)
+            old_a, old_r = a[i], r[i]
+            if events:
+                a[i] = rounded(old_a + events / n, digits)
+                aa += weight * (a[i] ** 2 - old_a**2)
+                ar += weight * (a[i] - old_a) * old_r
+            if (moved := (entering if t else 0) - leaving) != 0:
+                later.append((i, weight, moved))
+        for i, weight, moved in later:
+            old_a, old_r = a[i], r[i]
+            a[i], r[i] = rounded(old_a + moved * naive, digits), old_r + moved
+            aa += weight * (a[i] ** 2 - old_a**2)
+            ar += weight * (a[i] * r[i] - old_a * old_r)
+            rr += weight * (r[i] ** 2 - old_r**2)
+        aa, ar = rounded(aa, digits), rounded(ar, digits)
+        if t in wanted:
+            robust = rounded(aa - 2 * naive * ar + naive**2 * rr, digits)
+            rows.append(CountRow(t, n, d, mean, robust, naive))
+    return rows
+
+
 @dataclass(frozen=True)
 class GrayTest:
     """Gray's test: the statistic is None where there is nothing to compare."""
@@ -318,16 +416,18 @@ class GrayTest:
     degrees_of_freedom: int
 
 
-def gray_test(groups: Sequence[Sequence[Spell]], causes: Iterable[str]) -> GrayTest:
+def gray_test(
+    groups: Sequence[Sequence[Spell]], causes: Iterable[str], digits: int | None = None
+) -> GrayTest:
     """Compare the incidence of some causes between groups (Gray 1988, with all moments weighted alike).
 
     A group counts while someone in it is at risk and its survival is above 0. As if no other cause took
     anyone,
     reach = at risk / survival; the pooled incidence rises by events / reach of all groups. Ties are corrected
-    for as in the hypergeometric variance.
+    for as in the hypergeometric variance. For ``digits`` see the module's description.
     """
     wanted, size = set(causes), len(groups)
-    courses = [_Course(spells, wanted) for spells in groups]
+    courses = [_Course(spells, wanted, digits) for spells in groups]
     times = sorted({t for course in courses for t in (*course.own, *course.others)})
     scores = [Fraction(0)] * size
     moments = []
@@ -340,14 +440,14 @@ def gray_test(groups: Sequence[Sequence[Spell]], causes: Iterable[str]) -> GrayT
         gray = [r * (1 - s.incidence) for r, s in zip(reach, states, strict=True)]
         if sum(gray):
             for i in range(size):
-                scores[i] += own[i] - ended * gray[i] / sum(gray)
+                scores[i] = rounded(scores[i] + own[i] - ended * gray[i] / sum(gray), digits)
         step = ended / all_reach if all_reach else Fraction(0)
         direct = [
             [reach[k] * ((i == k) - reach[i] / all_reach) if all_reach else Fraction(0) for i in range(size)]
             for k in range(size)
         ]
         weight = step / (1 - pooled) if pooled < 1 else Fraction(0)
-        pooled += step
+        pooled = rounded(pooled + step, digits)
         moments.append((states, reach, all_reach, ended, direct, weight, step, pooled))
     covariance = [[Fraction(0)] * size for _ in range(size)]
     to_come = [[Fraction(0)] * size for _ in range(size)]
@@ -357,13 +457,14 @@ def gray_test(groups: Sequence[Sequence[Spell]], causes: Iterable[str]) -> GrayT
             if reach[k] and ended:
                 tie = _untied(ended, all_reach * s.before)
                 terms = [direct[k][i] + (1 - ratio if s.after else 1) * to_come[k][i] for i in range(size)]
-                _add_products(covariance, terms, tie * step * s.before / s.n)
+                _add_products(covariance, terms, tie * step * s.before / s.n, digits)
             if s.after and s.others:
                 terms = [ratio * to_come[k][i] for i in range(size)]
-                _add_products(covariance, terms, _untied(s.others, s.n) * s.others * (s.before / s.n) ** 2)
+                factor = _untied(s.others, s.n) * s.others * (s.before / s.n) ** 2
+                _add_products(covariance, terms, factor, digits)
         for k in range(size):
             for i in range(size):
-                to_come[k][i] += direct[k][i] * weight
+                to_come[k][i] = rounded(to_come[k][i] + direct[k][i] * weight, digits)
     statistic, rank = quadratic_form(scores, covariance)
     return GrayTest(tuple(scores), tuple(map(tuple, covariance)), statistic if rank else None, rank)
 
@@ -374,10 +475,12 @@ def _untied(events: Fraction, of: Fraction) -> Fraction:
     return max(Fraction(0), 1 - (events - 1) / (of - 1)) if of > events else Fraction(0)
 
 
-def _add_products(matrix: list[list[Fraction]], terms: Sequence[Fraction], factor: Fraction) -> None:
+def _add_products(
+    matrix: list[list[Fraction]], terms: Sequence[Fraction], factor: Fraction, digits: int | None
+) -> None:
     for i, one in enumerate(terms):
         for j, other in enumerate(terms):
-            matrix[i][j] += one * other * factor
+            matrix[i][j] = rounded(matrix[i][j] + one * other * factor, digits)
 
 
 @dataclass(frozen=True)
@@ -393,7 +496,7 @@ class _State:
 class _Course:
     """One group as Gray's test sees it: numbers, survival and incidence just before any duration."""
 
-    def __init__(self, spells: Sequence[Spell], wanted: set[str]) -> None:
+    def __init__(self, spells: Sequence[Spell], wanted: set[str], digits: int | None) -> None:
         self.own: dict[int, Fraction] = defaultdict(Fraction)
         self.others: dict[int, Fraction] = defaultdict(Fraction)
         for spell in spells:
@@ -405,19 +508,21 @@ class _Course:
             t: self.own.get(t, Fraction(0)) + self.others.get(t, Fraction(0))
             for t in (*self.own, *self.others)
         }
-        self.steps = incidence_steps(self.at_risk, dict(self.own), everyone)
+        self.steps = incidence_steps(self.at_risk, dict(self.own), everyone, digits)
+        self.durations = [step.duration for step in self.steps]
 
     def state(self, t: int) -> _State:
-        earlier = [step for step in self.steps if step.duration < t]
-        here = next((step for step in self.steps if step.duration == t), None)
-        before = earlier[-1].survival if earlier else Fraction(1)
+        place = bisect_left(self.durations, t)
+        earlier = self.steps[place - 1] if place else None
+        here = self.steps[place] if t in self.durations[place : place + 1] else None
+        before = earlier.survival if earlier else Fraction(1)
         return _State(
             self.at_risk(t),
             self.own.get(t, Fraction(0)),
             self.others.get(t, Fraction(0)),
             before,
             here.survival if here else before,
-            earlier[-1].incidence if earlier else Fraction(0),
+            earlier.incidence if earlier else Fraction(0),
         )
 
 
@@ -461,52 +566,85 @@ class StateRow:
     share: Fraction | None
 
 
-def state_shares(histories: Sequence[History], states: Sequence[str]) -> list[StateRow]:
-    """Compute Aalen and Johansen's shares of several states, at each duration at which a stay ends."""
-    stays: list[tuple[str, int, int, str | None]] = []
-    start: dict[str, int] = defaultdict(int)
-    for history in histories:
-        entry = max(history.entry, history.turns[0][0])
-        ends = [*(t for t, _ in history.turns[1:]), history.end]
-        nexts = [*(state for _, state in history.turns[1:]), None]
-        for (begin, state), end, following in zip(history.turns, ends, nexts, strict=True):
-            if begin == entry == 0:
-                start[state] += 1
-            if end > max(begin, entry):
-                stays.append((state, max(begin, entry), end, following))
-    seen = sum(start.values())
-    shares = {state: Fraction(start[state], seen or 1) for state in states}
+def state_shares(
+    histories: Sequence[History],
+    states: Sequence[str],
+    horizon: int | None = None,
+    grid: str = "steps",
+    digits: int | None = None,
+) -> list[StateRow]:
+    """Compute Aalen and Johansen's shares of several states, at each duration at which a stay ends.
+
+    ``horizon`` only cuts rows; with ``grid='every'`` there is a row for each unit. For ``digits`` see the
+    module's description.
+    """
+    course = StateCourse(histories, states)
+    seen = sum(course.start.values())
+    shares = {state: Fraction(course.start[state], seen or 1) for state in states}
+    steps = {0, *course.ends}
+    last = max(steps) if horizon is None else min(horizon, max(steps))
     rows = []
-    for t in sorted({0, *(end for _, _, end, _ in stays)}):
-        n = {g: sum(s == g and b < t <= e for s, b, e, _ in stays) for g in states}
-        moves = {
-            (g, h): sum(s == g and e == t and f == h for s, _, e, f in stays)
-            for g in states
-            for h in states
-            if g != h
-        }
-        if t and seen:
-            before = dict(shares)
-            for h in states:
-                value = Fraction(0)
-                for g in states:
-                    away = sum(moves[g, x] for x in states if x != g)
-                    hazard = (
-                        (n[g] - away if g == h else moves[g, h]) / Fraction(n[g])
-                        if n[g]
-                        else Fraction(int(g == h))
-                    )
-                    value += before[g] * hazard
-                shares[h] = value
+    for t in range(last + 1) if grid == "every" else sorted(t for t in steps if t <= last):
+        if t in course.ends and t and seen:
+            shares = _moved_on(shares, course, t, digits)
         for state in states:
             rows.append(
                 StateRow(
                     state,
                     t,
-                    n[state] if t else start[state],
-                    sum(moves[g, state] for g in states if g != state),
-                    sum(moves[state, h] for h in states if h != state),
+                    course.at_risk(state, t),
+                    sum(course.moves[t, g, state] for g in states if g != state),
+                    sum(course.moves[t, state, h] for h in states if h != state),
                     shares[state] if seen else None,
                 )
             )
     return rows
+
+
+class StateCourse:
+    """Who is in which state by tenure, and who moves; a stay is at risk after it begins, up to its end."""
+
+    def __init__(self, histories: Sequence[History], states: Sequence[str]) -> None:
+        self.states = states
+        self.start: Counter[str] = Counter()
+        self.moves: Counter[tuple[int, str, str]] = Counter()
+        self.begins: set[int] = set()
+        self.ends: set[int] = set()
+        stays: dict[str, list[tuple[int, int]]] = defaultdict(list)
+        for history in histories:
+            entry = max(history.entry, history.turns[0][0])
+            ends = [*(t for t, _ in history.turns[1:]), history.end]
+            nexts = [*(state for _, state in history.turns[1:]), None]
+            for (begin, state), end, following in zip(history.turns, ends, nexts, strict=True):
+                if begin == entry == 0:
+                    self.start[state] += 1
+                if end > max(begin, entry):
+                    stays[state].append((max(begin, entry), end))
+                    self.begins.add(max(begin, entry))
+                    self.ends.add(end)
+                    if following not in (None, state):
+                        self.moves[end, state, str(following)] += 1
+        self._begun = {state: sorted(begin for begin, _ in own) for state, own in stays.items()}
+        self._ended = {state: sorted(end for _, end in own) for state, own in stays.items()}
+
+    def at_risk(self, state: str, t: int) -> int:
+        """Return how many are in the state just before t; at 0 those seen in it."""
+        if t == 0:
+            return self.start[state]
+        return bisect_left(self._begun.get(state, []), t) - bisect_left(self._ended.get(state, []), t)
+
+
+def _moved_on(
+    shares: Mapping[str, Fraction], course: StateCourse, t: int, digits: int | None
+) -> dict[str, Fraction]:
+    states = course.states
+    moved = dict.fromkeys(states, Fraction(0))
+    for g in states:
+        n = course.at_risk(g, t)
+        away = sum(course.moves[t, g, h] for h in states if h != g)
+        for h in states:
+            if g == h:
+                moved[h] += shares[g] * (Fraction(n - away, n) if n else 1)
+            elif course.moves[t, g, h]:
+                moved[h] += shares[g] * Fraction(course.moves[t, g, h], n)
+    return {state: rounded(share, digits) for state, share in moved.items()}
