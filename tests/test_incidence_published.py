@@ -11,7 +11,7 @@ import pytest
 from lifelines import AalenJohansenFitter
 from test_incidence import WHOLE, call, close
 
-DATA = Path(__file__).parent / "data"
+SEEDS = Path(__file__).resolve().parents[1] / "seeds" / "reference"
 
 # 35 patients after a stem cell transplant for acute leukaemia, in months: 1 died of the transplant, 2
 # relapsed, 0 neither.
@@ -98,12 +98,11 @@ def load(engine, rows: list[tuple[int, int, int]]) -> None:
 
 
 def melanoma() -> list[tuple[int, int, int]]:
-    """205 patients operated on for melanoma: where they are from is said in test_incidence_comparisons. 2
-    here: other causes.
-    """
-    with (DATA / "melanoma.csv").open() as file:
+    """205 patients operated on for melanoma (docs/sources.md says where from); 2 here: other causes."""
+    with (SEEDS / "reference_melanoma.csv").open(newline="") as file:
         return [
-            (int(row["time"]), {"1": 1, "2": 0, "3": 2}[row["status"]], 1) for row in csv.DictReader(file)
+            (int(row["duration"]), {"melanoma": 1, "": 0, "other": 2}[row["cause"]], 1)
+            for row in csv.DictReader(file)
         ]
 
 

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import csv
 import math
 from collections import Counter
 from datetime import date, timedelta
@@ -11,6 +10,7 @@ from pathlib import Path
 from statistics import NormalDist
 from typing import Any
 
+import pandas as pd
 import pytest
 from harness import CompilationError
 from hypothesis import given, settings
@@ -19,6 +19,7 @@ from spellcurve.exact_incidence import Unit, mean_cumulative_count
 from strategies import GROUPS
 from test_incidence import close
 
+SEEDS = Path(__file__).resolve().parents[1] / "seeds" / "reference"
 SPELLS = {
     "plan": "text",
     "subject_id": "text",
@@ -319,18 +320,21 @@ def test_nelsons_valve_seats(engine):
     and standard errors in the
     first and last rows are those that reliability software prints for these data, from memory.
     """
-    with (Path(__file__).parent / "data" / "valve_seats.csv").open() as file:
-        records = [(row["id"], int(row["time"]), row["status"] == "1") for row in csv.DictReader(file)]
+    engines, replacements = (
+        pd.read_csv(SEEDS / f"reference_valve_seat_{name}.csv", dtype={"engine": str})
+        for name in ("engines", "replacements")
+    )
     spells = [
-        {"plan": "a", "subject_id": who, "entry": 0, "duration": age, "weight": 1}
-        for who, age, replaced in records
-        if not replaced
+        {"plan": "a", "subject_id": row.engine, "entry": 0, "duration": row.duration, "weight": 1}
+        for row in engines.itertuples()
     ]
     engine.load("spells", SPELLS, spells)
     engine.load(
-        "events", EVENTS, [{"who": who, "at": str(age)} for who, age, replaced in records if replaced]
+        "events",
+        EVENTS,
+        [{"who": row.engine, "at": str(row.replaced_at)} for row in replacements.itertuples()],
     )
-    assert len(spells) == 41 and len(records) == 89
+    assert len(spells) == 41 and len(replacements) == 48
     assert engine.run(call([], happened_as="tenure", rows="faulty")) == []
     rows = {row["duration"]: row for row in engine.run(call([], happened_as="tenure"))}
     printed = {61: (0.024, 0.024), 76: (0.049, 0.034), 84: (0.073, 0.041), 87: (0.098, 0.046)}

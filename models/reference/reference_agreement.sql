@@ -29,18 +29,9 @@ computed as (
         data_set as computed_data_set,
         coalesce(group_value, '') as computed_group_key,
         case when group_value is null then 1 else 0 end as computed_group_is_null,
+        figure as computed_figure,
         coalesce(duration, -1) as computed_duration_key,
-        at_risk,
-        survival,
-        std_error,
-        survival_lower,
-        survival_upper,
-        cumulative_hazard,
-        cumulative_hazard_std_error,
-        total_events,
-        median_duration,
-        median_lower,
-        median_upper
+        computed_value
     from {{ ref('reference_figures') }}
 ),
 
@@ -55,35 +46,14 @@ side_by_side as (
         published.allowed_difference,
         published.source,
         published.from_memory,
-        case
-            when computed.computed_data_set is null then 0
-            when published.figure in ({{ spellcurve._texts([
-                'at_risk', 'survival', 'std_error', 'survival_lower', 'survival_upper', 'cumulative_hazard',
-                'cumulative_hazard_std_error'
-            ]) }}) and published.duration is not null then 1
-            when published.figure in ({{ spellcurve._texts([
-                'total_events', 'median', 'median_lower', 'median_upper'
-            ]) }}) and published.duration is null then 1
-            else 0
-        end as is_found,
-        case published.figure
-            when 'at_risk' then {{ spellcurve._double('computed.at_risk') }}
-            when 'survival' then computed.survival
-            when 'std_error' then computed.std_error
-            when 'survival_lower' then computed.survival_lower
-            when 'survival_upper' then computed.survival_upper
-            when 'cumulative_hazard' then computed.cumulative_hazard
-            when 'cumulative_hazard_std_error' then computed.cumulative_hazard_std_error
-            when 'total_events' then computed.total_events
-            when 'median' then computed.median_duration
-            when 'median_lower' then computed.median_lower
-            when 'median_upper' then computed.median_upper
-        end as computed_value
+        case when computed.computed_data_set is null then 0 else 1 end as is_found,
+        computed.computed_value
     from published
     left join computed
         on published.data_set = computed.computed_data_set
         and published.group_key = computed.computed_group_key
         and published.group_is_null = computed.computed_group_is_null
+        and published.figure = computed.computed_figure
         and published.duration_key = computed.computed_duration_key
 ),
 

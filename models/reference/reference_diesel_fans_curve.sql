@@ -1,0 +1,3 @@
+{{ spellcurve.survival_curve(
+    ref('reference_diesel_fans_spells')
+) }}

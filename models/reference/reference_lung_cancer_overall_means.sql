@@ -1,0 +1,4 @@
+{{ spellcurve.restricted_mean(
+    ref('reference_lung_cancer_overall_curve'),
+    horizon=1022
+) }}

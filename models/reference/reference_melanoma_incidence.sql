@@ -1,0 +1,3 @@
+{{ spellcurve.cumulative_incidence(
+    ref('reference_melanoma_spells')
+) }}
