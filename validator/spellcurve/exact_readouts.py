@@ -231,8 +231,16 @@ def survival_beyond(
     base = _survival(rows, row)
     assert base
     found = []
+    variance, time, until = Fraction(0), Fraction(0), survived
+    told = True  # whether survival is known all the way from `survived` on
+    last = row
     for one in [row, *(later for later in rows if later.duration > survived)]:
         duration = max(one.duration, survived)
+        if one is not row:
+            variance += _greenwood_step(one)
+            told = told and all(_status(rows, unit) == OBSERVED for unit in _first_and_next(until, duration))
+            time += (_survival(rows, last) or Fraction(0)) * (duration - until)
+            last, until = one, duration
         at_risk = _at_risk(row, following, survived) if one is row else one.at_risk
         survival = _survival(rows, one)
         if survival is None:
@@ -240,32 +248,31 @@ def survival_beyond(
             found.append(ConditionalSurvival(survived, duration, at_risk, *nothing, TOO_FEW_AT_RISK))
             continue
         share = survival / base
-        variance = _greenwood_between(rows, survived, duration)
         std_error: float | None = None
         bounds: tuple[float | None, float | None] = (None, None)
         with localcontext(Context(prec=60)):
             if share:
                 std_error = float(exact.to_decimal(share) * exact.to_decimal(variance).sqrt())
                 bounds = exact._interval(share, variance, confidence, interval_scale)
-        time = None
-        if all(_status(rows, unit) == OBSERVED for unit in range(survived, duration)):
-            shares = [_survival(rows, _in_force(rows, unit)[0]) for unit in range(survived, duration)]
-            time = sum((share for share in shares if share is not None), Fraction(0)) / base
+        expected = time / base if told else None
         found.append(
-            ConditionalSurvival(survived, duration, at_risk, share, std_error, *bounds, time, OBSERVED)
+            ConditionalSurvival(survived, duration, at_risk, share, std_error, *bounds, expected, OBSERVED)
         )
     return found
 
 
-def _greenwood_between(rows: Sequence[CurveRow], after: int, until: int) -> Fraction:
-    """Sum d / (n (n - d)) over the events between two durations, except those that leave nobody."""
-    total = Fraction(0)
-    for row in rows:
-        if after < row.duration <= until and row.events:
-            assert row.at_risk is not None
-            if row.events < row.at_risk:
-                total += row.events / (row.at_risk * (row.at_risk - row.events))
-    return total
+def _first_and_next(start: int, end: int) -> range:
+    """The units from a row up to the next: all between two rows have one status, so two will do."""
+    return range(start, min(start + 2, end))
+
+
+def _greenwood_step(row: CurveRow) -> Fraction:
+    """What a row's events add to Greenwood's sum: d / (n (n - d)), and nothing where they leave nobody."""
+    if not row.events:
+        return Fraction(0)
+    assert row.at_risk is not None
+    left = row.at_risk - row.events
+    return row.events / (row.at_risk * left) if left else Fraction(0)
 
 
 @dataclass(frozen=True)
