@@ -257,7 +257,13 @@ cells_at_events as (
 {%- endmacro %}
 
 
-{# The share of the variance that ties leave: (n - d) / (n - 1), for d events among n; 1 where there is no tie. #}
+{#
+    The share of the variance that ties leave: (n - d) / (n - 1), for d events among n; 1 where there is no tie. Where all but a rounding
+    error have the event, all have it: a variance of nothing must be 0.
+#}
 {% macro _tie_share(events, at_risk) %}
-    {{ return('case when ' ~ events ~ ' > 1 then (' ~ at_risk ~ ' - ' ~ events ~ ') / (' ~ at_risk ~ ' - 1) else 1 end') }}
+    {{ return(
+        'case when ' ~ events ~ ' <= 1 then 1 when ' ~ events ~ ' >= ' ~ at_risk ~ ' * (1 - 1e-12) then 0 else (' ~ at_risk ~ ' - ' ~ events
+        ~ ') / (' ~ at_risk ~ ' - 1) end'
+    ) }}
 {% endmacro %}

@@ -50,7 +50,8 @@
             {%- if adjustment == 'none' %}
             when {{ condition }} then {{ p_value }}
             {%- else %}
-            when {{ condition }} then least(1, {{ p_value }} * count({{ p_value }}) over ({{ spellcurve._partition_by(family) | trim }}))
+            when {{ condition }} and {{ p_value }} is not null
+                then least(1, {{ p_value }} * count({{ p_value }}) over ({{ spellcurve._partition_by(family) | trim }}))
             {%- endif %}
         end as {{ p_value }}_adjusted
     from {{ cte }}

@@ -22,7 +22,7 @@ from typing import Any
 from scipy.stats import chi2
 
 from spellcurve.exact import Spell, _at_risk_counter, normal_quantile, to_decimal
-from spellcurve.exact_incidence import quadratic_form
+from spellcurve.exact_incidence import quadratic_form, rounded
 
 WEIGHTINGS = ("log-rank", "gehan", "tarone-ware", "peto", "modified-peto", "fleming-harrington(p, q)")
 PAIRS = ("none", "all", "reference")
@@ -105,6 +105,7 @@ def log_rank_test(
     confidence: float = 0.95,
     most_groups: int = 50,
     label: Callable[[Any], str] = str,
+    digits: int | None = None,
 ) -> list[ComparedRow]:
     """Compare groups of spells.
 
@@ -117,6 +118,7 @@ def log_rank_test(
         confidence: of the intervals of hazard ratios.
         most_groups: with more, nothing is compared.
         label: the text of a group's value as the warehouse writes it.
+        digits: with it, products are rounded to so many significant ones, for long courses.
 
     Returns:
         the row of all groups, then those of pairs; none without spells.
@@ -135,7 +137,7 @@ def log_rank_test(
     if len(values) > most_groups:
         return [ComparedRow(ALL_GROUPS, None, None, weighting, TOO_MANY_GROUPS)]
 
-    everyone = compared_sums(strata, values, weighting)
+    everyone = compared_sums(strata, values, weighting, digits)
     rows = [_judged(ComparedRow(ALL_GROUPS, None, None, weighting, ""), everyone)]
     if pairs == "reference" and reference not in values:
         rows += [
@@ -156,7 +158,7 @@ def log_rank_test(
         if pairs == "all"
         else [(value, reference) for value in values if value != reference]
     )
-    tested = [_pair(strata, names, a, b, weighting, confidence) for a, b in wanted]
+    tested = [_pair(strata, names, a, b, weighting, confidence, digits) for a, b in wanted]
     adjusted = adjusted_p_values([row.p_value for row in tested], adjustment)
     rows += [replace(row, p_value_adjusted=p) for row, p in zip(tested, adjusted, strict=True)]
     return rows
@@ -214,7 +216,7 @@ def moments(groups: Mapping[Any, Sequence[Spell]], values: Sequence[Any]) -> lis
     ]
 
 
-def moment_weights(course: Sequence[Moment], weighting: str) -> list[Fraction]:
+def moment_weights(course: Sequence[Moment], weighting: str, digits: int | None = None) -> list[Fraction]:
     """Return the weight of each moment of a stratum; its survival is that of all groups together.
 
     ``peto`` takes the survival prod (1 - d / (n + 1)) up to and with the moment, ``modified-peto`` that times
@@ -232,9 +234,9 @@ def moment_weights(course: Sequence[Moment], weighting: str) -> list[Fraction]:
             weight = _power(n, Fraction(1, 2))
         elif kind == "fleming-harrington":
             weight = _power(survival, p) * _power(1 - survival, q)
-            survival *= 1 - d / n
+            survival = rounded(survival * (1 - d / n), digits)
         else:
-            survival *= 1 - d / (n + 1)
+            survival = rounded(survival * (1 - d / (n + 1)), digits)
             weight = survival if kind == "peto" else survival * n / (n + 1)
         weights.append(weight)
     return weights
@@ -251,27 +253,37 @@ def _power(base: Fraction, exponent: Fraction) -> Fraction:
 
 
 def compared_sums(
-    strata: Mapping[Hashable, Mapping[Any, Sequence[Spell]]], values: Sequence[Any], weighting: str
+    strata: Mapping[Hashable, Mapping[Any, Sequence[Spell]]],
+    values: Sequence[Any],
+    weighting: str,
+    digits: int | None = None,
 ) -> Sums:
     """Sum up observed minus expected events, and their covariance given the numbers at risk (Mantel 1966).
 
     A tie of d events among n takes the factor (n - d) / (n - 1) off the covariance; up to 1 event is no tie.
+    A variance is the sum of the group's covariances with the others, its sign turned, so that rounding (with
+    ``digits``) does not touch the rank.
     """
     size = len(values)
     observed, expected, scores = ([Fraction(0)] * size for _ in range(3))
     covariance = [[Fraction(0)] * size for _ in range(size)]
     for groups in strata.values():
         course = moments(groups, values)
-        for moment, weight in zip(course, moment_weights(course, weighting), strict=True):
-            n, d = moment.n, moment.d
-            spread = d * (n - d) / (n - 1) if d > 1 else d
+        for moment, exact_weight in zip(course, moment_weights(course, weighting, digits), strict=True):
+            n, d, weight = moment.n, moment.d, rounded(exact_weight, digits)
             share = [at_risk / n for at_risk in moment.at_risk]
             for i in range(size):
+                excess = weight * (moment.events[i] - d * share[i])
                 observed[i] += moment.events[i]
-                expected[i] += d * share[i]
-                scores[i] += weight * (moment.events[i] - d * share[i])
-                for j in range(size):
-                    covariance[i][j] += weight**2 * spread * share[i] * ((i == j) - share[j])
+                expected[i] += rounded(d * share[i], digits)
+                scores[i] += rounded(excess, digits)
+            spread = weight**2 * (d * (n - d) / (n - 1) if d > 1 else d)
+            for i, j in combinations([i for i in range(size) if share[i]], 2):
+                link = rounded(spread * share[i] * share[j], digits)
+                covariance[i][j] -= link
+                covariance[j][i] -= link
+                covariance[i][i] += link
+                covariance[j][j] += link
     return Sums(tuple(observed), tuple(expected), tuple(scores), tuple(map(tuple, covariance)))
 
 
@@ -301,9 +313,10 @@ def _pair(
     b: Any,
     weighting: str,
     confidence: float,
+    digits: int | None,
 ) -> ComparedRow:
     """Compare two groups as if there were no others, and estimate the ratio of their hazards in one step."""
-    unweighted = compared_sums(strata, (a, b), "log-rank")
+    unweighted = compared_sums(strata, (a, b), "log-rank", digits)
     ratio, lower, upper = hazard_ratio(
         unweighted.observed[0] - unweighted.expected[0], unweighted.covariance[0][0], confidence
     )
@@ -321,7 +334,7 @@ def _pair(
         hazard_ratio_lower=lower,
         hazard_ratio_upper=upper,
     )
-    return _judged(row, compared_sums(strata, (a, b), weighting))
+    return _judged(row, compared_sums(strata, (a, b), weighting, digits))
 
 
 def hazard_ratio(
