@@ -70,7 +70,7 @@
 
 {#
     The CTEs that end with `weighted_cells`: a row for each group (numbered 1, 2, … in the order of its values, null last) at each
-    duration of a stratum at which anyone has the event, and at 0. Groups beyond `most_groups` are counted in group_count, no more.
+    duration of a stratum at which anyone has the event, and at 0. Of more groups than `most_groups` there is group_count, and no event.
     Columns: the segments, stratum, duration, group_number, group_count, reference_number, group_label, at_risk, events,
     all_at_risk, all_events, all_weight.
     is_reference: a condition on the group's column, or none.
@@ -123,7 +123,7 @@ cells as (
         max(case when group_number = number then group_label end) as group_label,
         max(case when group_number = number then at_risk end) as own_at_risk,
         sum(case when group_number = number then events else 0 end) as events,
-        max(all_events) as all_events
+        max(case when group_count <= {{ most_groups }} then all_events else 0 end) as all_events
     from counted_risk_sets
     inner join numbers on number <= group_count
     group by {{ each }}stratum, duration, number
