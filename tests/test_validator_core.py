@@ -550,13 +550,16 @@ def test_durations_are_completed_units(start, end, unit, length):
 def test_moments_are_read_strictly():
     assert read_moment("2024-01-02T03:04:05.5") == datetime(2024, 1, 2, 3, 4, 5, 500000)
     assert read_moment(date(2024, 1, 2)) == read_moment("2024-01-02") == datetime(2024, 1, 2)
+    assert read_moment("2024-01-02 03:04") == datetime(2024, 1, 2, 3, 4)
     assert read_moment(None) is None
     for bad in (
         "",
         "2024-1-2",
         "02/01/2024",
         "2024-02-30",
-        "2024-01-02 03:04",
+        "2024-01-02 03",
+        "2024-01-02 03:04.5",
+        "2024-01-02 03:04:05.",
         "2024-01-02 ",
         20240102,
         "never",
