@@ -10,9 +10,10 @@
         model, recent, at, compare, baseline, alpha, as_of, unit, strata, weighting
     ) -%}
     {%- do spellcurve._check_flag('survival_has_not_shifted', 'say', say) -%}
-    {%- if say and execute and flags.WHICH in ('test', 'build') -%}
+    {#- dbt puts the SQL of an ephemeral model before a test when it runs it, and not before a query -#}
+    {%- if say and execute and flags.WHICH in ('test', 'build') and '__dbt__cte__' not in model | string -%}
         {%- for row in run_query(sql).rows -%}
-            {%- do log('survival_has_not_shifted on ' ~ model.identifier ~ ': ' ~ row[0], info=true) -%}
+            {%- do log('survival_has_not_shifted on ' ~ (model if model is string else model.identifier) ~ ': ' ~ row[0], info=true) -%}
         {%- endfor -%}
     {%- endif -%}
     {{ sql }}

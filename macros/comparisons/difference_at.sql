@@ -1,7 +1,7 @@
-{% macro difference_at(curve, between, durations, reference, by=[], confidence=0.95, test_scale='linear') %}
+{% macro difference_at(curve, between, durations, reference=none, by=[], confidence=0.95, test_scale='linear') %}
     {%- do spellcurve._check_call(
         'difference_at',
-        {'curve': curve, 'between': between, 'durations': durations, 'reference': reference},
+        {'curve': curve, 'between': between, 'durations': durations},
         ['curve', 'between', 'durations', 'reference', 'by', 'confidence', 'test_scale'],
         kwargs, varargs
     ) -%}

@@ -1,7 +1,7 @@
-{% macro difference_in_restricted_mean(curve, between, horizon, reference, by=[], confidence=0.95) %}
+{% macro difference_in_restricted_mean(curve, between, horizon, reference=none, by=[], confidence=0.95) %}
     {%- do spellcurve._check_call(
         'difference_in_restricted_mean',
-        {'curve': curve, 'between': between, 'horizon': horizon, 'reference': reference},
+        {'curve': curve, 'between': between, 'horizon': horizon},
         ['curve', 'between', 'horizon', 'reference', 'by', 'confidence'],
         kwargs, varargs
     ) -%}

@@ -34,10 +34,9 @@
 {% endmacro %}
 
 
-{# Rounded up, but not because of a last digit. #}
 {% macro _rounded_up(number) %}
     {%- set below = number | int -%}
-    {{ return(below if number - below <= number * 1e-9 else below + 1) }}
+    {{ return(below if number == below else below + 1) }}
 {% endmacro %}
 
 

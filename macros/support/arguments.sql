@@ -26,7 +26,7 @@
         {{ return("a relation such as ref('…') or source('…', '…'), or the name of a CTE") }}
     {%- elif name in ('opens', 'closes', 'active', 'sources', 'durations', 'shares', 'horizons') -%}
         {{ return('a value or a list of values') }}
-    {%- elif name in ('lapse_after', 'width', 'horizon', 'survived') -%}
+    {%- elif name in ('lapse_after', 'width', 'horizon', 'survived', 'hazard_ratio') -%}
         {{ return('a number') }}
     {%- else -%}
         {{ return('the name of a column') }}

@@ -305,7 +305,7 @@ def time_to_events_needed(
     """
     events = sum((Fraction(s.weight) for s in spells if s.event and s.counts), Fraction(0))
     at_risk = sum((Fraction(s.weight) * (s.duration - s.entry) for s in spells), Fraction(0))
-    whole = math.ceil(needed * (1 - 1e-9))
+    whole = math.ceil(needed)
     hazard = events / at_risk if at_risk else None
     if hazard is None:
         return Time(whole, None, intake, None, None, "no_time_at_risk")
