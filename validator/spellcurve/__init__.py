@@ -1,8 +1,10 @@
 """Spellcurve's validator: proves that the figures of the Spellcurve dbt package are right."""
 
+from spellcurve.certificate import write_certificate
 from spellcurve.compare import Comparison, Disagreement, compare_curves
 from spellcurve.exact import CurveRow, Spell, group_spells, survival_curve, survival_curves
 from spellcurve.provenance import Provenance, ProvenanceError, find_provenance, first_provenance
+from spellcurve.qualification import Figure, Qualification, QualificationError, qualify
 
 __version__ = "0.1.0"
 
@@ -10,14 +12,19 @@ __all__ = [
     "Comparison",
     "CurveRow",
     "Disagreement",
+    "Figure",
     "Provenance",
     "ProvenanceError",
+    "Qualification",
+    "QualificationError",
     "Spell",
     "__version__",
     "compare_curves",
     "find_provenance",
     "first_provenance",
     "group_spells",
+    "qualify",
     "survival_curve",
     "survival_curves",
+    "write_certificate",
 ]

@@ -19,6 +19,7 @@ from rich.padding import Padding
 from rich.table import Table
 
 from spellcurve import __version__
+from spellcurve.cli_qualify import qualify
 from spellcurve.compare import TOLERANCE
 from spellcurve.generate import DEFAULT_MEMBERS, DEFAULT_SEED, FEWEST_MEMBERS, MOST_MEMBERS
 from spellcurve.summary import (
@@ -61,6 +62,9 @@ def spellcurve(
 
     Start with: spellcurve demo
     """
+
+
+app.command()(qualify)
 
 
 @app.command()
