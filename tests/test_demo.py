@@ -111,7 +111,7 @@ def test_seeds_loaded_by_dbt_are_the_generator_s_tables(tmp_path):
 def test_demo_agrees(small):
     _, printed = small
     assert printed.exit_code == 0, printed.output
-    assert "✓ 9 curves and 14 read-outs: " in printed.output
+    assert "✓ 9 curves, 15 read-outs and 10 tables of causes, counts and states: " in printed.output
     assert "✗" not in printed.output
 
 
@@ -201,6 +201,67 @@ def test_every_read_out_that_is_printed_was_compared(small, small_result):
     assert f"{figures:,} figures compared with exact fractions" in " ".join(small[1].output.split())
 
 
+def test_every_table_of_causes_counts_and_states_was_compared(small, small_result):
+    folder = SEEDS.parents[1] / "models" / "demo" / "ends"
+    made = {sql.stem for sql in folder.glob("*.sql")} - {"demo_membership_spells_by_ending"}
+    compared = {one.model: one.exact for one in small_result.checked_ends}
+    assert set(compared) == {name for name in made if not name.endswith("_faulty")}
+    with duckdb.connect(str(small[0] / demo.DATABASE)) as connection:
+        for name, comparison in compared.items():
+            rows = connection.execute(f"select count(*) from {demo.SCHEMA}.{name}").fetchone()[0]
+            assert comparison.rows == rows > 0
+            assert comparison.figures >= 3 * rows
+
+
+def test_causes_loans_and_states_are_what_a_plain_count_gives(small, small_result):
+    """Without estimators: causes and states by lifelines and by hand, loans by a sum over days at risk."""
+    ends = small_result.ends
+    with duckdb.connect(str(small[0] / demo.DATABASE)) as connection:
+        spells = connection.execute(f"select * from {demo.SCHEMA}.demo_membership_spells").df()
+        loans = connection.execute(
+            f"select member_id, cast(lent_at as date) as lent_on from {demo.SCHEMA}.demo_loans "
+            "where member_id is not null and lent_at is not null"
+        ).df()
+    counted = spells[(spells["entry"] < spells["duration"]) | (spells["duration"] == 0)]
+    for plan, own in counted.groupby("plan"):
+        shares = {row["cause"]: row["incidence"] for row in ends.leaving if row["plan"] == plan}
+        assert shares == pytest.approx(incidences(own, demo.LEFT_BY), rel=1e-9)
+        stay = next(row["survival"] for row in ends.staying if row["plan"] == plan)
+        assert stay + sum(shares.values()) == pytest.approx(1, rel=1e-9)
+        found = [row for row in ends.loans if row["plan"] == plan and row["duration"] <= 365][-1]
+        assert found["mean_count"] == pytest.approx(loans_within(own, loans, 365), rel=1e-9)
+    for duration in {row["duration"] for row in ends.states}:
+        for plan in ("household", "individual"):
+            own = [r for r in ends.states if r["duration"] == duration and r["plan"] == plan]
+            assert not own or sum(row["share"] for row in own) == pytest.approx(1, rel=1e-9)
+    assert {row["status"] for row in ends.tests} == {"compared"}
+
+
+def incidences(spells: pd.DataFrame, by_day: int) -> dict[str, float]:
+    """Aalen and Johansen's estimate, day by day, in plain floats."""
+    survival, found = 1.0, dict.fromkeys(spells["cause"].dropna().unique(), 0.0)
+    for day in range(by_day + 1):
+        at_risk = ((spells["entry"] < day) | (spells["entry"] == 0)) & (spells["duration"] >= day)
+        ended = spells[at_risk & (spells["duration"] == day) & (spells["event"] == 1)]
+        for cause, count in ended["cause"].value_counts().items():
+            found[cause] += survival * count / at_risk.sum()
+        survival *= 1 - len(ended) / at_risk.sum()
+    return found
+
+
+def loans_within(spells: pd.DataFrame, loans: pd.DataFrame, by_day: int) -> float:
+    """The sum over days of loans by the members of that day."""
+    both = spells.merge(loans, left_on="subject_id", right_on="member_id")
+    both = both[(both["lent_on"] >= both["started_at"]) & (both["lent_on"] <= both["last_seen_at"])]
+    tenure = (both["lent_on"] - both["started_at"]).dt.days
+    tenure = tenure[(tenure > both["entry"]) | (both["entry"] == 0)]
+    total = 0.0
+    for day, count in tenure[tenure <= by_day].value_counts().items():
+        at_risk = ((spells["entry"] < day) | (spells["entry"] == 0)) & (spells["duration"] >= day)
+        total += count / at_risk.sum()
+    return total
+
+
 def test_young_cohorts_have_cells_that_have_not_matured(small):
     with duckdb.connect(str(small[0] / demo.DATABASE)) as connection:
         cohorts = connection.execute(
@@ -217,6 +278,21 @@ def test_printed_figures_are_the_result_s(small, small_result):
     text = " ".join(small[1].output.split())
     assert "400 members are on its books" in text
     assert f"{small_result.still_members:,} were still members on 1 June 2026" in text
+    ends = small_result.ends
+    assert len(ends.leaving) == 8 and len(ends.loan_differences) == len(demo.LOANS_AT)
+    for row in ends.leaving:
+        assert summary.incidence_in_words(row) in text
+    for row in ends.loan_differences:
+        assert summary.ratio_in_words(row) in text
+    for row in ends.tests:
+        assert summary.chance_in_words(row["p_value"], row["status"]) in text
+    for plan in ("household", "individual"):
+        loans = [row for row in ends.loans if row["plan"] == plan]
+        assert all(summary.count_in_words(loans, duration) in text for duration in demo.LOANS_AT)
+        states = [row for row in ends.states if row["plan"] == plan]
+        for duration in demo.STATES_AT:
+            words = summary.states_in_words(states, demo.STATES, duration)
+            assert f"after {duration} days {' '.join(words)}" in text
     for answer in small_result.answers:
         assert answer.question.title in text
         for group in answer.groups:
@@ -311,6 +387,36 @@ SPOILT = {
     "update demo_membership_hazards set hazard_upper = 1 where from_duration = 0": (
         "hazard_upper at plan household, from_duration 0 is 1.0, but"
     ),
+    "update demo_lapse_causes set incidence = incidence * (1 + 2e-9) where cause = 'cost'": (
+        "incidence at plan household, cause cost, duration "
+    ),
+    "update demo_lapse_causes_shares set incidence = null where cause = 'moved' and duration = 365": (
+        "incidence at plan household, cause moved, duration 365 is null, but "
+    ),
+    "update demo_lapse_causes_hazards set hazard = 0 where cause = 'unused'": (
+        "hazard at plan household, cause unused, duration "
+    ),
+    "update demo_lapse_causes_stacked set share_from = 0.5 where part = 'still a member'": (
+        "share_from at plan household, duration 0, part still a member is 0.5, but 0 is expected."
+    ),
+    "update demo_lapse_causes_gray set p_value = 0.5 where ending = 'cost'": (
+        "p_value at ending cost is 0.5, but"
+    ),
+    "update demo_lapse_causes_log_rank set observed_a = 0 where comparison <> 'all groups'": (
+        "observed_a at ending cost, comparison household vs individual is 0.0, but"
+    ),
+    "update demo_loan_counts set std_error = std_error * 1.00001 where plan = 'individual'": (
+        "std_error at plan individual, duration "
+    ),
+    "update demo_loan_count_differences set ratio_upper = 9 where duration = 365": (
+        "ratio_upper at group_a household, duration 365 is 9.0, but"
+    ),
+    "update demo_membership_states set share = share + 1e-8 where state = 'paused'": (
+        "share at plan household, state paused, duration 0 is 1e-08, but 0 is expected."
+    ),
+    "delete from demo_part_life_table where from_duration = 100": (
+        "The row at part drive belt, from_duration 100 is missing from the table."
+    ),
 }
 
 
@@ -332,7 +438,7 @@ def test_a_wrong_read_out_is_printed_as_it_stands_and_gives_exit_status_1(copied
     printed = run("demo", "--folder", copied, "--check-only")
     assert printed.exit_code == 1
     assert all(words in printed.output for words in ("12.3% (", "12 (3 to ", "4,321 ("))
-    assert "✗ 9 curves and 14 read-outs" in printed.output
+    assert "✗ 9 curves, 15 read-outs and 10 tables" in printed.output
     assert "demo_membership_shares: 1 figures or rows disagree" in printed.output
     assert "survival at duration 90 is 0.123, but" in " ".join(printed.output.split())
 
@@ -342,7 +448,7 @@ def test_a_lost_source_row_gives_exit_status_1_through_the_tests(copied):
     printed = run("demo", "--folder", copied, "--check-only")
     assert printed.exit_code == 1
     assert "✓ 9 curves" in printed.output
-    assert "29 of 30 dbt tests passed" in printed.output
+    assert "33 of 34 dbt tests passed" in printed.output
     assert "every_row_accounted_for" in printed.output
 
 

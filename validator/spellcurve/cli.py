@@ -19,21 +19,30 @@ from rich.padding import Padding
 from rich.table import Table
 
 from spellcurve import __version__
+from spellcurve.cli_check import check
 from spellcurve.cli_qualify import qualify
 from spellcurve.compare import TOLERANCE
 from spellcurve.generate import DEFAULT_MEMBERS, DEFAULT_SEED, FEWEST_MEMBERS, MOST_MEMBERS
 from spellcurve.summary import (
     BEYOND_FOLLOW_UP,
+    MISSING,
     NOT_REACHED,
+    REASONS_IN_WORDS,
     average_in_words,
+    chance_in_words,
+    count_in_words,
     faults_in_words,
     half_in_words,
+    incidence_in_words,
+    ratio_in_words,
+    share_at,
     share_in_words,
+    states_in_words,
     status_in_words,
 )
 
 if TYPE_CHECKING:
-    from spellcurve.demo import Answer, DemoResult, Step
+    from spellcurve.demo import Answer, DemoResult, Ends, Step
 
 AGREEMENT, DISAGREEMENT, COULD_NOT_RUN = 0, 1, 2
 _SHOWN_DISAGREEMENTS = 5
@@ -64,6 +73,7 @@ def spellcurve(
     """
 
 
+app.command()(check)
 app.command()(qualify)
 
 
@@ -151,6 +161,9 @@ def _print_result(out: Console, result: DemoResult) -> None:
     )
     for answer in result.answers:
         _print_answer(out, answer)
+    _print_leaving(out, result.ends)
+    _print_loans(out, result.ends)
+    _print_states(out, result.ends)
     _print_how_to_read(out, result)
     _print_refusals(out, result)
     _print_agreement(out, result)
@@ -180,9 +193,82 @@ def _print_answer(out: Console, answer: Answer) -> None:
         f"average {question.unit} within {question.horizon:,}",
         *(average_in_words(group.average) for group in answer.groups),
     )
-    out.print(f"\n[bold]{question.title}[/]")
-    out.print(f"[dim]{question.note}[/]")
+    _print_section(out, question.title, question.note, table)
+
+
+def _print_section(out: Console, title: str, note: str, table: Table) -> None:
+    out.print(f"\n[bold]{title}[/]")
+    out.print(f"[dim]{note}[/]")
     out.print(Padding(table, (0, 0, 0, 2)))
+
+
+def _print_leaving(out: Console, ends: Ends) -> None:
+    from spellcurve.demo import LEFT_BY
+
+    plans = [row["plan"] for row in ends.staying]
+    table = _plain_table()
+    table.add_column(f"by day {LEFT_BY}")
+    for plan in plans:
+        table.add_column(str(plan), style="none")
+    table.add_column("do the plans differ?")
+    tests = {row["ending"]: row for row in ends.tests}
+    for cause, words in REASONS_IN_WORDS.items():
+        shares = {row["plan"]: incidence_in_words(row) for row in ends.leaving if row["cause"] == cause}
+        test = tests.get(cause)
+        table.add_row(
+            f"left: {words}",
+            *(shares.get(plan, status_in_words(MISSING)) for plan in plans),
+            chance_in_words(test["p_value"], test["status"]) if test else status_in_words(MISSING),
+        )
+    stay = [share_at([row for row in ends.staying if row["plan"] == plan], LEFT_BY) for plan in plans]
+    table.add_row("still members", *(share_in_words(share) for share in stay), "")
+    note = (
+        "Shares of all memberships; each column adds up to 100%. A reason is told with the others at work: "
+        "who has moved away cannot find it too dear any more. p is that of Gray's test, over all of "
+        "follow-up."
+    )
+    _print_section(out, "Why do they leave?", note, table)
+
+
+def _print_loans(out: Console, ends: Ends) -> None:
+    from spellcurve.demo import LOANS_AT
+
+    plans = list(dict.fromkeys(row["plan"] for row in ends.loans))
+    differences = {row["duration"]: row for row in ends.loan_differences}
+    table = _plain_table()
+    table.add_column("loans up to")
+    for plan in plans:
+        table.add_column(str(plan), style="none")
+    table.add_column("household against individual")
+    for duration in LOANS_AT:
+        counts = [
+            count_in_words([row for row in ends.loans if row["plan"] == plan], duration) for plan in plans
+        ]
+        row = differences.get(duration)
+        table.add_row(f"day {duration}", *counts, ratio_in_words(row) if row else status_in_words(MISSING))
+    note = (
+        "Loans of a member on average, while a membership lasts: the loans of each day, shared among those "
+        "who were members on it, and added up. The intervals allow for some borrowing more than others."
+    )
+    _print_section(out, "How often do they borrow?", note, table)
+
+
+def _print_states(out: Console, ends: Ends) -> None:
+    from spellcurve.demo import STATES, STATES_AT
+
+    table = _plain_table()
+    for name in ("", "", *STATES):
+        table.add_column(name, style="none", justify="right" if name else "left")
+    for plan in dict.fromkeys(row["plan"] for row in ends.states):
+        own = [row for row in ends.states if row["plan"] == plan]
+        for place, duration in enumerate(STATES_AT):
+            shares = states_in_words(own, STATES, duration)
+            table.add_row("" if place else str(plan), f"after {duration} days", *shares)
+    note = (
+        "Of those who joined since July 2020, by days since joining, as the status changes tell it. Who has "
+        "lapsed can come back."
+    )
+    _print_section(out, "Active, paused or lapsed?", note, table)
 
 
 def _print_how_to_read(out: Console, result: DemoResult) -> None:
@@ -230,9 +316,9 @@ def _print_agreement(out: Console, result: DemoResult) -> None:
     exact = sum(table.exact.figures for table in result.tables)
     independent = sum(one.figures for curve in result.checked for one in curve.independent)
     out.print(
-        f"{_tick(not result.disagreements)} {len(result.checked)} curves and {len(result.readouts)} "
-        f"read-outs: {exact:,} figures compared with "
-        f"exact fractions, {independent:,} with lifelines; "
+        f"{_tick(not result.disagreements)} {len(result.checked)} curves, {len(result.readouts)} "
+        f"read-outs and {len(result.checked_ends)} tables of causes, counts and states: {exact:,} figures "
+        f"compared with exact fractions, {independent:,} with lifelines; "
         f"largest relative difference {result.largest_difference:.1e} (allowed {_short_power(TOLERANCE)})."
     )
     for model, sentences in result.disagreements.items():
@@ -261,6 +347,7 @@ def _print_where(out: Console, result: DemoResult) -> None:
     table.add_row("schema", result.schema)
     table.add_row("curves", ", ".join(curve.model for curve in result.checked))
     table.add_row("read-outs", ", ".join(readout.model for readout in result.readouts))
+    table.add_row("causes, …", ", ".join(one.model for one in result.checked_ends))
     table.add_row("spells", ", ".join(refusals.spells for refusals in result.refusals))
     table.add_row("refused rows", "beside each spell table, under its name with _faulty")
     table.add_row("records", ", ".join(result.records))

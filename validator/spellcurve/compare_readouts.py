@@ -7,7 +7,7 @@ to the figures of that row. ``compare_readouts`` compares.
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Collection, Iterable, Mapping, Sequence
 from decimal import Decimal
 from fractions import Fraction
 from typing import Any
@@ -21,16 +21,17 @@ KEYS = {
     "survival_at": ("duration",),
     "survival_quantiles": ("share",),
     "restricted_mean": ("horizon",),
+    "survival_beyond": ("survived", "duration"),
     "cohort_readout": ("duration",),
     "hazard_by_band": ("from_duration",),
 }
 #: What reads a curve; the others read spells.
-OF_CURVES = ("survival_at", "survival_quantiles", "restricted_mean")
+OF_CURVES = ("survival_at", "survival_quantiles", "restricted_mean", "survival_beyond")
 
 #: A figure that is a difference of two larger numbers loses leading digits; this close to what is expected
 #: it agrees, whatever the ratio.
 _ALLOWANCE = 1e-12
-_DIFFERENCES = (
+DIFFERENCES = (
     "survival_lower",
     "survival_upper",
     "event_share",
@@ -60,6 +61,11 @@ def of_curves(macro: str, curves: Mapping[Group, Sequence[CurveRow]], options: M
         elif macro == "survival_quantiles":
             for share in options["shares"]:
                 table[(*group, share)] = _without(exact_readouts.survival_quantile(rows, share), "share")
+        elif macro == "survival_beyond":
+            confidence, interval_scale = options["confidence"], options["interval_scale"]
+            for survived in options["survived"]:
+                for one in exact_readouts.survival_beyond(rows, survived, confidence, interval_scale):
+                    table[(*group, survived, one.duration)] = _without(one, "survived", "duration")
         else:
             for horizon in options["horizon"]:
                 mean = exact_readouts.restricted_mean(
@@ -92,8 +98,8 @@ def of_spells(macro: str, spells: Mapping[Group, Sequence[Spell]], options: Mapp
     return table
 
 
-def _without(row: Any, key: str) -> Figures:
-    return {name: figure for name, figure in vars(row).items() if name != key}
+def _without(row: Any, *keys: str) -> Figures:
+    return {name: figure for name, figure in vars(row).items() if name not in keys}
 
 
 def _shares(found: exact_readouts.SurvivalAt) -> Figures:
@@ -133,6 +139,7 @@ def compare_readouts(
     expected: Table,
     names: Sequence[str],
     tolerance: float = TOLERANCE,
+    differences: Collection[str] = DIFFERENCES,
 ) -> Comparison:
     """Compare a published read-out with the expected one, status included.
 
@@ -141,6 +148,7 @@ def compare_readouts(
         expected: values of the columns in ``names`` to the figures of that row, by column.
         names: the group columns, then the macro's ``KEYS``.
         tolerance: largest relative difference that still counts as agreement.
+        differences: columns that may also be off by a rounding of larger numbers.
     """
     found = Comparison()
     published: dict[Group, Mapping[str, Any]] = {}
@@ -157,19 +165,25 @@ def compare_readouts(
             continue
         for column, right in figures.items():
             found.figures += 1
-            _compare(found, names, key, column, right, match.get(column), tolerance)
+            allowance = _ALLOWANCE if column in differences else 0.0
+            _compare(found, names, key, column, right, match.get(column), tolerance, allowance)
     for key in published:
         _wrong(found, "extra row", names, key, "should not be in the table")
     return found
 
 
 def _place(names: Sequence[str], key: Group) -> str:
-    return ", ".join(f"{name} {_shown(value)}" for name, value in zip(names, key, strict=True))
+    pairs = zip(names, key, strict=True)
+    return ", ".join(f"{name} {_shown(value)}" for name, value in pairs) or "the only place"
 
 
 def _wrong(found: Comparison, kind: str, names: Sequence[str], key: Group, what: str) -> None:
     sentence = f"The row at {_place(names, key)} {what}."
-    found.disagreements.append(Disagreement(kind, key[:-1], key[-1], None, None, None, sentence))
+    found.disagreements.append(Disagreement(kind, key[:-1], _last(key), None, None, None, sentence))
+
+
+def _last(key: Group) -> Any:
+    return key[-1] if key else None
 
 
 def _compare(
@@ -180,13 +194,14 @@ def _compare(
     right: Any,
     given: Any,
     tolerance: float,
+    allowance: float,
 ) -> None:
     place = f"{column} at {_place(names, key)}"
     if right is None or given is None or isinstance(right, str) or not _is_number(given):
         agrees, kind = right == given, "wrong null" if right is None or given is None else "wrong number"
     else:
         gap = abs(Fraction(given) - Fraction(right))
-        if column in _DIFFERENCES and gap <= _ALLOWANCE:
+        if gap <= allowance:
             return
         difference = 0.0 if not gap else float(gap / abs(Fraction(right))) if right else math.inf
         agrees, kind = difference <= tolerance, "wrong number"
@@ -194,7 +209,7 @@ def _compare(
             found.largest_difference, found.largest_at = difference, place
     if not agrees:
         sentence = f"{place} is {_shown(given)}, but {_shown(right)} is expected."
-        found.disagreements.append(Disagreement(kind, key[:-1], key[-1], column, right, given, sentence))
+        found.disagreements.append(Disagreement(kind, key[:-1], _last(key), column, right, given, sentence))
 
 
 def _is_number(value: Any) -> bool:

@@ -15,7 +15,7 @@ from typing import Any
 import duckdb
 from dbt.cli.main import dbtRunner
 
-from spellcurve import compare_readouts, generate
+from spellcurve import compare_ends, compare_readouts, generate
 from spellcurve.compare import Comparison, compare_curves
 from spellcurve.exact import CurveRow, Spell, group_spells, survival_curves
 from spellcurve.independent import independent_curves
@@ -136,6 +136,12 @@ QUESTIONS = (
     ),
 )
 
+#: Durations in days that are told of causes, of loans and of states.
+LEFT_BY = 365
+LOANS_AT = (30, 90, 365, 730)
+STATES_AT = (30, 90, 365, 730)
+STATES = ("active", "paused", "lapsed")
+
 #: Every spell table of the demo, and the tables whose rows it accounts for.
 SOURCES: dict[str, tuple[str, ...]] = {
     "demo_membership_spells": ("demo_memberships",),
@@ -154,6 +160,27 @@ class Answer:
 
     question: Question
     groups: tuple[GroupFigures, ...]
+
+
+@dataclass(frozen=True)
+class Ends:
+    """Rows of the tables of causes, loans and states, as the summary tells of them.
+
+    Attributes:
+        leaving: the shares that have left by `LEFT_BY`, by cause and plan.
+        staying: the share still members then, by plan.
+        tests: Gray's test between plans, by cause.
+        loans: mean counts of loans, by plan and duration.
+        loan_differences: how they differ between plans at `LOANS_AT`.
+        states: shares of states, by plan and duration.
+    """
+
+    leaving: Rows
+    staying: Rows
+    tests: Rows
+    loans: Rows
+    loan_differences: Rows
+    states: Rows
 
 
 @dataclass(frozen=True)
@@ -224,9 +251,11 @@ class DemoResult:
     members: int
     still_members: int
     answers: tuple[Answer, ...]
+    ends: Ends
     refusals: tuple[Refusals, ...]
     checked: tuple[CheckedCurve, ...]
     readouts: tuple[CheckedReadout, ...]
+    checked_ends: tuple[CheckedReadout, ...]
     tests_run: int
     tests_failed: tuple[str, ...]
     records: tuple[str, ...] = generate.TABLES
@@ -234,7 +263,7 @@ class DemoResult:
     @property
     def tables(self) -> tuple[CheckedCurve | CheckedReadout, ...]:
         """All tables that were compared, curves first."""
-        return (*self.checked, *self.readouts)
+        return (*self.checked, *self.readouts, *self.checked_ends)
 
     @property
     def disagreements(self) -> dict[str, list[str]]:
@@ -286,8 +315,10 @@ def run_demo(
         checked = demo.check_curves()
     with step("Recomputing what is read off them in exact fractions"):
         readouts = demo.check_readouts()
+    with step("Recomputing causes, counts and states in exact fractions"):
+        ends = demo.check_ends()
     with step("Gathering the figures"):
-        return demo.result(checked, readouts, tests)
+        return demo.result(checked, readouts, ends, tests)
 
 
 def find_project() -> Path:
@@ -464,8 +495,37 @@ class _Demo:
                 for model, provenance in self._compiled_calls(compare_readouts.KEYS).items()
             )
 
+    def check_ends(self) -> tuple[CheckedReadout, ...]:
+        """Recomputes the tables of causes, recurrent events and states from what their macros read."""
+        calls = {
+            model: provenance
+            for model, provenance in self._compiled_calls(compare_ends.KEYS).items()
+            if provenance.options.get("rows", "sound") == "sound"
+        }
+        with self._connect() as connection:
+            recomputed = compare_ends.Recomputed(
+                lambda relation, select: _rows(connection, select.replace("{source}", relation)),
+                made_by=lambda relation: calls.get(_bare(relation)),
+            )
+            return tuple(
+                CheckedReadout(
+                    model,
+                    compare_readouts.compare_readouts(
+                        _rows(connection, f"select * from {_table(model)}"),
+                        recomputed.table(provenance),
+                        compare_ends.names(provenance),
+                        differences=compare_ends.DIFFERENCES,
+                    ),
+                )
+                for model, provenance in calls.items()
+            )
+
     def result(
-        self, checked: tuple[CheckedCurve, ...], readouts: tuple[CheckedReadout, ...], tests: Sequence[Any]
+        self,
+        checked: tuple[CheckedCurve, ...],
+        readouts: tuple[CheckedReadout, ...],
+        ends: tuple[CheckedReadout, ...],
+        tests: Sequence[Any],
     ) -> DemoResult:
         """Gathers the figures from the tables."""
         with self._connect() as connection:
@@ -477,9 +537,11 @@ class _Demo:
                 members=_count(connection, "demo_members", "joined_on is not null"),
                 still_members=_count(connection, "demo_membership_spells", "event = 0"),
                 answers=tuple(_answer(connection, question) for question in QUESTIONS),
+                ends=_ends(connection),
                 refusals=tuple(_refusals(connection, *known) for known in SOURCES.items()),
                 checked=checked,
                 readouts=readouts,
+                checked_ends=ends,
                 tests_run=len(tests),
                 tests_failed=tuple(one.node.name for one in tests if one.status not in ("pass", "warn")),
             )
@@ -487,6 +549,10 @@ class _Demo:
 
 def _table(name: str) -> str:
     return f'"{SCHEMA}"."{name}"'
+
+
+def _bare(relation: str) -> str:
+    return relation.rsplit(".", 1)[-1].strip('"')
 
 
 def _quoted(names: Sequence[str]) -> list[str]:
@@ -551,8 +617,7 @@ def _check_readout(
 ) -> CheckedReadout:
     macro, options, by = provenance.macro, provenance.options, provenance.by
     if macro in compare_readouts.OF_CURVES:
-        curve = options["curve"].rsplit(".", 1)[-1].strip('"')
-        expected = compare_readouts.of_curves(macro, curves[curve], options)
+        expected = compare_readouts.of_curves(macro, curves[_bare(options["curve"])], options)
     else:
         expected = compare_readouts.of_spells(macro, _spells(connection, provenance), options)
         by = ("cohort", *by) if macro == "cohort_readout" else by
@@ -613,6 +678,20 @@ def _answer(connection: duckdb.DuckDBPyConnection, question: Question) -> Answer
                 )
             )
     return Answer(question, tuple(groups))
+
+
+def _ends(connection: duckdb.DuckDBPyConnection) -> Ends:
+    def table(name: str, where: str = "true") -> Rows:
+        return _rows(connection, f"select * from {_table(name)} where {where} order by all")
+
+    return Ends(
+        leaving=table("demo_lapse_causes_shares", f"duration = {LEFT_BY}"),
+        staying=table("demo_membership_shares_by_plan", f"duration = {LEFT_BY}"),
+        tests=table("demo_lapse_causes_gray"),
+        loans=table("demo_loan_counts"),
+        loan_differences=table("demo_loan_count_differences"),
+        states=table("demo_membership_states"),
+    )
 
 
 def _of(label: Any, rows: Rows) -> Rows:

@@ -408,12 +408,13 @@ def _counts_of_many(
 
 @dataclass(frozen=True)
 class GrayTest:
-    """Gray's test: the statistic is None where there is nothing to compare."""
+    """Gray's test: the statistic is None where there is nothing to compare; observed counts the events."""
 
     scores: tuple[Fraction, ...]
     covariance: tuple[tuple[Fraction, ...], ...]
     statistic: Fraction | None
     degrees_of_freedom: int
+    observed: Fraction = Fraction(0)
 
 
 def gray_test(
@@ -431,7 +432,7 @@ def gray_test(
     times = sorted({t for course in courses for t in (*course.own, *course.others)})
     scores = [Fraction(0)] * size
     moments = []
-    pooled = Fraction(0)
+    pooled, observed = Fraction(0), Fraction(0)
     for t in times:
         states = [course.state(t) for course in courses]
         reach = [s.n / s.before if s.n and s.before else Fraction(0) for s in states]
@@ -441,6 +442,7 @@ def gray_test(
         if sum(gray):
             for i in range(size):
                 scores[i] = rounded(scores[i] + own[i] - ended * gray[i] / sum(gray), digits)
+        observed += ended
         step = ended / all_reach if all_reach else Fraction(0)
         direct = [
             [reach[k] * ((i == k) - reach[i] / all_reach) if all_reach else Fraction(0) for i in range(size)]
@@ -466,7 +468,7 @@ def gray_test(
             for i in range(size):
                 to_come[k][i] = rounded(to_come[k][i] + direct[k][i] * weight, digits)
     statistic, rank = quadratic_form(scores, covariance)
-    return GrayTest(tuple(scores), tuple(map(tuple, covariance)), statistic if rank else None, rank)
+    return GrayTest(tuple(scores), tuple(map(tuple, covariance)), statistic if rank else None, rank, observed)
 
 
 def _untied(events: Fraction, of: Fraction) -> Fraction:

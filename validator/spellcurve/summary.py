@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections import defaultdict
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -20,6 +20,14 @@ STATUS_IN_WORDS = {
     "none_survived": "nobody left",
     "several_curves": "several curves in one",
     MISSING: "missing from the table",
+}
+
+#: Why a membership ended, as the membership book has it.
+REASONS_IN_WORDS = {
+    "unused": "not using it",
+    "moved": "moved away",
+    "cost": "too dear",
+    "other": "other reasons",
 }
 
 #: What the builders' fault codes mean, for somebody who has not read the documentation.
@@ -179,6 +187,63 @@ def average_in_words(average: AverageWithin) -> str:
     if average.lower is None or average.upper is None or average.lower == average.upper:
         return f"{average.mean:,.0f}"
     return f"{average.mean:,.0f} ({average.lower:,.0f} to {average.upper:,.0f})"
+
+
+def incidence_in_words(row: Mapping[str, Any]) -> str:
+    """A row of `incidence_at`: for instance '4.4% (3.3 to 5.8)' or 'not yet observable'."""
+    bounds = row["incidence_lower"], row["incidence_upper"]
+    if row["incidence"] is None:
+        return status_in_words(row["status"] or MISSING)
+    if None in bounds or row["incidence"] == 0:
+        return percent(row["incidence"])
+    return f"{percent(row['incidence'])} ({100 * bounds[0]:.1f} to {100 * bounds[1]:.1f})"
+
+
+def count_in_words(rows: Iterable[Mapping[str, Any]], duration: int) -> str:
+    """One group's `mean_cumulative_count` at a duration: '4.67 (4.48 to 4.86)', or why there is none."""
+    known = sorted(rows, key=lambda row: row["duration"])
+    if not known:
+        return status_in_words(MISSING)
+    reached = [row for row in known if row["duration"] <= duration]
+    if not reached or known[-1]["duration"] < duration:
+        return status_in_words(BEYOND_FOLLOW_UP)
+    row = reached[-1]
+    if row["mean_count"] is None:
+        return status_in_words("too_few_at_risk")
+    if row["mean_count_lower"] is None or row["mean_count"] == 0:
+        return f"{row['mean_count']:.2f}"
+    return f"{row['mean_count']:.2f} ({row['mean_count_lower']:.2f} to {row['mean_count_upper']:.2f})"
+
+
+def ratio_in_words(row: Mapping[str, Any]) -> str:
+    """A row of `difference_in_mean_count` as a multiple: for instance '1.56 times (1.47 to 1.65)'."""
+    if row["ratio"] is None:
+        return status_in_words(row["status"] or MISSING)
+    if row["ratio_lower"] is None:
+        return f"{row['ratio']:.2f} times"
+    return f"{row['ratio']:.2f} times ({row['ratio_lower']:.2f} to {row['ratio_upper']:.2f})"
+
+
+def states_in_words(rows: Iterable[Mapping[str, Any]], states: Sequence[str], duration: int) -> list[str]:
+    """The shares of the states in one group's rows of `state_shares` at a duration, in their order."""
+    known = sorted(rows, key=lambda row: row["duration"])
+    if known and known[-1]["duration"] < duration:
+        return [status_in_words(BEYOND_FOLLOW_UP)] * len(states)
+    said = []
+    for state in states:
+        reached = [row for row in known if row["state"] == state and row["duration"] <= duration]
+        share = reached[-1]["share"] if reached else None
+        said.append(
+            status_in_words(MISSING if not reached else BEYOND_FOLLOW_UP) if share is None else percent(share)
+        )
+    return said
+
+
+def chance_in_words(p_value: float | None, status: str) -> str:
+    """A p-value: for instance 'p = 0.009', 'p < 0.001', or why there is none."""
+    if p_value is None:
+        return status.replace("_", " ")
+    return "p < 0.001" if p_value < 0.001 else f"p = {p_value:.3f}"
 
 
 def status_in_words(status: str) -> str:

@@ -1,0 +1,1 @@
+{{ spellcurve.cumulative_incidence(ref('demo_membership_spells'), by=['plan']) }}

@@ -1,0 +1,1 @@
+{{ spellcurve.incidence_hazards(ref('demo_lapse_causes'), by=['plan']) }}

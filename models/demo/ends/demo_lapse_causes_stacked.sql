@@ -1,0 +1,1 @@
+{{ spellcurve.incidence_stacked(ref('demo_lapse_causes'), by=['plan'], rest='still a member') }}
