@@ -8,19 +8,20 @@ from __future__ import annotations
 
 import tempfile
 import time
-from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
+from collections.abc import Callable, Collection, Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, field, replace
 from decimal import Context, localcontext
 from fractions import Fraction
 from pathlib import Path
 from typing import Any
 
-from spellcurve import compare_readouts, exact, exact_readouts, rebuild
+from spellcurve import compare_ends, compare_groups, compare_readouts, exact, exact_readouts, rebuild
 from spellcurve.compare import TOLERANCE, Comparison, compare_curves
 from spellcurve.compare_spells import as_moment, compare_rows, local
 from spellcurve.exact import BOUNDS, FIGURES, CurveRow, Spell
 from spellcurve.independent import independent_curves
 from spellcurve.project import Call, Model, Project, ProjectError, Rows, WarehouseError
+from spellcurve.provenance import Provenance
 
 AGREES, DISAGREES, STALE, UNCHECKED = "agrees", "disagrees", "stale", "not checked"
 SAMPLE = 200
@@ -221,7 +222,6 @@ class _Checker:
         self.project = project
         self.tolerance = tolerance
         self.sample = sample
-        self.curves: dict[str, Curves] = {}  # by relation
         self.computed: dict[int, Curves] = {}  # by identity of the call
 
     def check(self, model: Model) -> Iterator[CheckedCall]:
@@ -304,6 +304,10 @@ class _Checker:
                 return self._of_spells(call)
             if macro in BUILDERS:
                 return self._of_builder(call)
+            if macro in compare_ends.KEYS:
+                return self._of_ends(call)
+            if macro in compare_groups.KEYS:
+                return self._of_groups(call)
         except ValueError as error:  # spells that are no spells
             raise NotChecked(f"What the model reads is not sound: {error}") from error
         raise NotChecked(f"The validator has no way to recompute {macro}.")
@@ -350,31 +354,55 @@ class _Checker:
         self.computed[id(call)] = curves
         return curves
 
-    def curve_of(self, call: Call, relation: str) -> tuple[Curves, str]:
-        """The curve that a read-out reads: recomputed where a model makes it, else as published."""
-        if relation not in self.curves:
-            made = self.project.made_by(relation) if relation.lower() not in call.ctes else None
-            if made is not None and len(made.calls) == 1 and made.calls[0].whole:
-                source = made.calls[0]
-                if source.provenance.macro == "survival_curve":
-                    known = self.computed.get(id(source))
-                    self.curves[relation] = known or self._exact_curves(source, self.spells(source))
-        if relation in self.curves:
-            return self.curves[relation], ""
-        rows = self.rows_of(call, relation)
-        curves: dict[Group, list[CurveRow]] = {}
-        by = bare(call.provenance.by)
+    def curve_of(self, call: Call, relation: str, columns: Sequence[str]) -> tuple[Curves, str]:
+        """The curve that a call reads by these columns: recomputed if a model makes it, else as published."""
+        by = bare(columns)
+        source = self._making(call, relation)
+        if source is not None and source.provenance.macro == "survival_curve":
+            curves = self.computed.get(id(source)) or self._exact_curves(source, self.spells(source))
+            return _by(curves, bare(source.provenance.by), by), ""
+        published: dict[Group, list[CurveRow]] = {}
+        rows = self.query(call, relation, "select * from {source}")
         for row in sorted(rows, key=lambda row: int(row["duration"])):
             group = tuple(row[name] for name in by)
             figures = {name: _exact(row.get(name)) for name in FIGURES}
-            curves.setdefault(group, []).append(CurveRow(group, row["duration"], **figures))
-        return curves, "It was recomputed from the curve as published, for no model is that curve alone."
+            published.setdefault(group, []).append(CurveRow(group, row["duration"], **figures))
+        for group, own in published.items():
+            published[group] = list(_with_greenwood_sums(own))
+        return published, "It was recomputed from the curve as published, for no model is that curve alone."
 
     def _of_readout(self, call: Call) -> Expected:
-        macro, options = call.provenance.macro, call.provenance.options
-        curves, note = self.curve_of(call, options["curve"])
-        table = compare_readouts.of_curves(macro, curves, options)
-        return self._table(table, (*bare(call.provenance.by), *compare_readouts.KEYS[macro]), note)
+        provenance = call.provenance
+        macro, by = provenance.macro, provenance.by
+        made_by = self._curve_columns(call)
+        if made_by is not None and set(bare(by)) < set(bare(made_by)):
+            table = self._mixed(call, made_by)
+            return self._table(table, (*bare(by), *compare_readouts.KEYS[macro]))
+        curves, note = self.curve_of(call, provenance.options["curve"], by)
+        table = compare_readouts.of_curves(macro, curves, provenance.options)
+        return self._table(table, (*bare(by), *compare_readouts.KEYS[macro]), note)
+
+    def _curve_columns(self, call: Call) -> tuple[str, ...] | None:
+        made = self._maker(call, call.provenance.options["curve"])
+        return made.by if made is not None and made.macro == "survival_curve" else None
+
+    def _mixed(self, call: Call, made_by: Sequence[str]) -> compare_readouts.Table:
+        """The rows of a read-out that lacks a column of the curve: where curves are mixed up, it says so."""
+        macro, options, by = call.provenance.macro, call.provenance.options, bare(call.provenance.by)
+        if macro == "survival_beyond":
+            raise NotChecked(f"It reads several curves as one; give the call by={list(made_by)}.")
+        curves, _ = self.curve_of(call, options["curve"], made_by)
+        places = [bare(made_by).index(name) for name in by]
+        together: dict[Group, list[Group]] = {}
+        for group in curves:
+            together.setdefault(tuple(group[place] for place in places), []).append(group)
+        table: compare_readouts.Table = {}
+        for own, groups in together.items():
+            found = compare_readouts.of_curves(macro, {own: curves[groups[0]]}, options)
+            for key, figures in found.items():
+                mixed = {name: "several_curves" if name == "status" else None for name in figures}
+                table[key] = figures if len(groups) == 1 else mixed
+        return table
 
     def _of_spells(self, call: Call) -> Expected:
         macro, options, by = call.provenance.macro, call.provenance.options, bare(call.provenance.by)
@@ -382,9 +410,96 @@ class _Checker:
         groups = ("cohort", *by) if macro == "cohort_readout" else by
         return self._table(table, (*groups, *compare_readouts.KEYS[macro]))
 
-    def _table(self, table: compare_readouts.Table, names: Sequence[str], note: str = "") -> Expected:
+    def _of_ends(self, call: Call) -> Expected:
+        provenance = call.provenance
+        ends = compare_ends.Recomputed(
+            lambda relation, select: self.query(call, relation, select),
+            self.project.column,
+            lambda relation: self._maker(call, relation),
+        )
+        if provenance.options.get("rows", "sound") == "faulty":
+            refused = ends.refused(provenance)
+
+            def compare(rows: Rows) -> tuple[Comparison, ...]:
+                return (compare_rows(rows, refused, "refused row"),)
+
+            return Expected(compare)
+        names = compare_ends.names(provenance)
+        return self._table(ends.table(provenance), names, differences=compare_ends.DIFFERENCES)
+
+    def _of_groups(self, call: Call) -> Expected:
+        provenance, note = call.provenance, ""
+        if provenance.macro in compare_groups.OF_SPELLS:
+            columns = compare_groups.columns(provenance)
+            grouped = self.spells(call, columns)
+            spells = [spell for own in grouped.values() for spell in own]
+            label = self._labels(call, provenance.spells or "")
+            intakes = self._intakes(call) if provenance.macro == "time_to_events_needed" else None
+            table = compare_groups.of_spells(provenance, spells, label, intakes)
+        elif provenance.macro in compare_groups.OF_CURVES:
+            relation = provenance.options["curve"]
+            curves, note = self.curve_of(call, relation, compare_groups.columns(provenance))
+            table = compare_groups.of_curves(provenance, curves, self._labels(call, relation))
+        else:
+            table = compare_groups.of_nothing(provenance)
+        names = (*bare(provenance.by), *compare_groups.KEYS[provenance.macro])
+        return self._table(table, names, note, compare_groups.DIFFERENCES)
+
+    def _intakes(self, call: Call) -> dict[Group, Fraction | None]:
+        """Spells that begin in a unit: of those watched from the start, until anybody was last seen."""
+        options, by = call.provenance.options, call.provenance.by
+        if options["intake"] is not None:
+            return {}
+        keys = [self.project.column(name) for name in by]
+        named = "".join(f"{column} as group_{place}, " for place, column in enumerate(keys))
+        rows = self.query(
+            call,
+            call.provenance.spells or "",
+            f"select {named}sum(case when entry = 0 then weight else 0 end) as begun, "
+            "min(case when entry = 0 then started_at end) as first_start, "
+            "max(last_seen_at) as last_seen from {source}" + (f" group by {', '.join(keys)}" if keys else ""),
+        )
+        last = max((as_moment(row["last_seen"]) for row in rows if row["last_seen"]), default=None)
+        intakes: dict[Group, Fraction | None] = {}
+        for row in rows:
+            units = 0
+            if row["first_start"] and last:
+                units = rebuild.completed_units(as_moment(row["first_start"]), last, options["unit"])
+            group = tuple(row[f"group_{place}"] for place in range(len(by)))
+            intakes[group] = Fraction(row["begun"]) / units if units > 0 else None
+        return intakes
+
+    def _labels(self, call: Call, relation: str) -> Callable[[Any], str]:
+        """How the warehouse writes the values of the column compared as text."""
+        between = call.provenance.options.get("between")
+        if not between:
+            return str
+        column = self.project.column(between)
+        text = self.project.macro("_as_text", column)
+        rows = self.query(
+            call, relation, f"select distinct {column} as given, {text} as label from {{source}}"
+        )
+        labels = {row["given"]: row["label"] for row in rows}
+        return lambda value: str(labels.get(value, value))
+
+    def _making(self, call: Call, relation: str) -> Call | None:
+        """The call that is all of the model which makes a relation, if there is one."""
+        made = self.project.made_by(relation) if relation.lower() not in call.ctes else None
+        return made.calls[0] if made is not None and len(made.calls) == 1 and made.calls[0].whole else None
+
+    def _maker(self, call: Call, relation: str) -> Provenance | None:
+        making = self._making(call, relation)
+        return None if making is None else making.provenance
+
+    def _table(
+        self,
+        table: compare_readouts.Table,
+        names: Sequence[str],
+        note: str = "",
+        differences: Collection[str] = compare_readouts.DIFFERENCES,
+    ) -> Expected:
         def compare(rows: Rows) -> tuple[Comparison, ...]:
-            return (compare_readouts.compare_readouts(rows, table, names, self.tolerance),)
+            return (compare_readouts.compare_readouts(rows, table, names, self.tolerance, differences),)
 
         return Expected(compare, note=note)
 
@@ -410,14 +525,10 @@ class _Checker:
         except WarehouseError as error:
             raise NotChecked(f"{relation}, which it reads, cannot be read ({error}).") from error
 
-    def rows_of(self, call: Call, relation: str) -> Rows:
-        """All rows of a published curve or incidence."""
-        return self.query(call, relation, "select * from {source}")
-
-    def spells(self, call: Call) -> dict[Group, list[Spell]]:
+    def spells(self, call: Call, by: Sequence[str] | None = None) -> dict[Group, list[Spell]]:
         """The spells a call reads, added up by the warehouse, by group; a cohort comes first in its group."""
         provenance = call.provenance
-        expressions = [self.project.column(name) for name in provenance.by]
+        expressions = [self.project.column(name) for name in (provenance.by if by is None else by)]
         if cohort := provenance.options.get("cohort"):
             column = self.project.column(cohort)
             if period := provenance.options.get("period"):
@@ -629,6 +740,29 @@ def _needed(call: Call, place: int) -> list[str]:
 def bare(names: Iterable[str]) -> tuple[str, ...]:
     """Column names as a query gives them: without quotes, in lower case."""
     return tuple(name.strip('"`[]').lower() for name in names)
+
+
+def _by(curves: Curves, made_by: tuple[str, ...], wanted: tuple[str, ...]) -> Curves:
+    """Curves by the same columns in another order."""
+    if set(made_by) != set(wanted):
+        raise NotChecked(
+            f"It reads the curve by {', '.join(wanted) or 'nothing'}, but that was made by "
+            f"{', '.join(made_by) or 'nothing'}; give the call the same by."
+        )
+    places = [made_by.index(name) for name in wanted]
+    return {tuple(group[place] for place in places): rows for group, rows in curves.items()}
+
+
+def _with_greenwood_sums(rows: Iterable[CurveRow]) -> Iterator[CurveRow]:
+    """Add up d / (n (n - d)) over the rows of a published curve."""
+    total: Fraction | None = Fraction(0)
+    for row in rows:
+        if row.at_risk is None or row.events is None or row.survival is None or total is None:
+            total = None
+        elif row.events:
+            n, d = Fraction(row.at_risk), Fraction(row.events)
+            total = None if d >= n else total + d / (n * (n - d))
+        yield replace(row, greenwood_sum=total)
 
 
 def _exact(value: Any) -> Any:

@@ -16,6 +16,8 @@ from dataclasses import dataclass
 from decimal import Context, Decimal, localcontext
 from fractions import Fraction
 
+from scipy.stats import chi2
+
 from spellcurve import exact
 from spellcurve.exact import CurveRow, Spell
 
@@ -328,12 +330,19 @@ def hazard_by_band(
     return bands
 
 
+_MOST_SUMMED = 2_000
+
+
 def poisson_limits(events: int, confidence: float) -> tuple[float, float]:
     """Find the exact limits of a Poisson mean: each leaves (1 - confidence) / 2 to the counts beyond.
 
     The lower is 0 for no events. Bisection on sums of Poisson probabilities in 40 decimal digits, the sums
-    taken outwards from ``events`` until they stop mattering.
+    taken outwards from ``events`` until they stop mattering; for more events than ``_MOST_SUMMED``, whose sums
+    are long, scipy's quantiles of the chi-square distribution.
     """
+    if events > _MOST_SUMMED:
+        tail = (1 - confidence) / 2
+        return float(chi2.ppf(tail, 2 * events)) / 2, float(chi2.isf(tail, 2 * events + 2)) / 2
     with localcontext(Context(prec=40)):
         share = (1 - Decimal(repr(confidence))) / 2
         far = Decimal(40) * (Decimal(events + 1).sqrt() + 4)
