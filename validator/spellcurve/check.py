@@ -13,6 +13,7 @@ from dataclasses import dataclass, field, replace
 from decimal import Context, localcontext
 from fractions import Fraction
 from pathlib import Path
+from types import MappingProxyType
 from typing import Any
 
 from spellcurve import compare_ends, compare_groups, compare_readouts, exact, exact_readouts, rebuild
@@ -425,7 +426,8 @@ class _Checker:
 
             return Expected(compare)
         names = compare_ends.names(provenance)
-        return self._table(ends.table(provenance), names, differences=compare_ends.DIFFERENCES)
+        roots = {"std_error": "mean_count"} if provenance.macro == "mean_cumulative_count" else {}
+        return self._table(ends.table(provenance), names, "", compare_ends.DIFFERENCES, roots)
 
     def _of_groups(self, call: Call) -> Expected:
         provenance, note = call.provenance, ""
@@ -497,9 +499,11 @@ class _Checker:
         names: Sequence[str],
         note: str = "",
         differences: Collection[str] = compare_readouts.DIFFERENCES,
+        roots: Mapping[str, str] = MappingProxyType({}),
     ) -> Expected:
         def compare(rows: Rows) -> tuple[Comparison, ...]:
-            return (compare_readouts.compare_readouts(rows, table, names, self.tolerance, differences),)
+            found = compare_readouts.compare_readouts(rows, table, names, self.tolerance, differences, roots)
+            return (found,)
 
         return Expected(compare, note=note)
 
@@ -538,10 +542,8 @@ class _Checker:
                 )
             expressions.insert(0, column)
         named = [f"{text} as group_{place}" for place, text in enumerate(expressions)]
-        columns = ", ".join([*named, "entry", "duration", "event", "cause", "sum(weight) as weight"])
-        keys = ", ".join([*expressions, "entry", "duration", "event", "cause"])
-        if provenance.macro in WITHOUT_CAUSE:
-            columns, keys = columns.replace(", cause", ""), keys.removesuffix(", cause")
+        columns = ", ".join([*named, "entry", "duration", "event", "sum(weight) as weight"])
+        keys = ", ".join([*expressions, "entry", "duration", "event"])
         rows = self.query(call, provenance.spells or "", f"select {columns} from {{source}} group by {keys}")
         return exact.group_spells(
             Spell(
@@ -549,7 +551,7 @@ class _Checker:
                 row["duration"],
                 row["event"],
                 _exact(row["weight"]) or 0,
-                row.get("cause"),
+                None,
                 tuple(row[f"group_{place}"] for place in range(len(expressions))),
             )
             for row in rows
@@ -678,15 +680,6 @@ CURVE_OPTIONS = (
     "small_counts",
     "weights",
 )
-#: Macros whose spells need no column ``cause``.
-WITHOUT_CAUSE = (
-    "survival_curve",
-    "cohort_readout",
-    "hazard_by_band",
-    "actuarial_table",
-    "log_rank_test",
-    "trend_test",
-)
 #: The builders, and the names of what they read.
 BUILDERS = {
     "spells_from_intervals": ("relation",),
@@ -777,13 +770,10 @@ def _with_bands(
     rows: Sequence[CurveRow], spells: Sequence[Spell], kind: str, options: Mapping[str, Any]
 ) -> list[CurveRow]:
     """Replace pointwise bounds by those of a simultaneous band, whose reach takes the place of z."""
-    whole = exact.survival_curve(spells, grid="steps")
+    whole = exact.survival_curve(spells)
     confidence, scale = options["confidence"], options["interval_scale"]
-    reaches = dict(
-        zip(
-            (row.duration for row in whole), exact_readouts.band_reaches(whole, kind, confidence), strict=True
-        )
-    )
+    found = exact_readouts.band_reaches(whole, kind, confidence, options["horizon"])
+    reaches = dict(zip((row.duration for row in whole), found, strict=True))
     z = Fraction(exact.normal_quantile(confidence))
     banded, reach = [], None
     for row in rows:

@@ -337,8 +337,8 @@ def poisson_limits(events: int, confidence: float) -> tuple[float, float]:
     """Find the exact limits of a Poisson mean: each leaves (1 - confidence) / 2 to the counts beyond.
 
     The lower is 0 for no events. Bisection on sums of Poisson probabilities in 40 decimal digits, the sums
-    taken outwards from ``events`` until they stop mattering; for more events than ``_MOST_SUMMED``, whose sums
-    are long, scipy's quantiles of the chi-square distribution.
+    taken outwards from ``events`` until they stop mattering; for more events than ``_MOST_SUMMED``, whose
+    sums are long, scipy's quantiles of the chi-square distribution.
     """
     if events > _MOST_SUMMED:
         tail = (1 - confidence) / 2
@@ -444,15 +444,22 @@ def _bisect(falls: Callable[[float], float], low: float, high: float) -> float:
     return (low + high) / 2
 
 
-def band_reaches(rows: Sequence[CurveRow], kind: str, confidence: float = 0.95) -> list[float | None]:
+def band_reaches(
+    rows: Sequence[CurveRow], kind: str, confidence: float = 0.95, horizon: int | None = None
+) -> list[float | None]:
     """Compute what each row's band takes for z times std_error / survival; None where survival is 0 or 1.
 
     Args:
         rows: one group's rows of the whole curve (no horizon), with their Greenwood sums.
         kind: ``equal-precision`` or ``hall-wellner``.
         confidence: with which the band holds between the first and the last event.
+        horizon: the last duration for which it has to hold; None for the last event.
     """
-    sums = [row.greenwood_sum for row in rows if row.greenwood_sum]
+    sums = [
+        row.greenwood_sum
+        for row in rows
+        if row.greenwood_sum and (horizon is None or row.duration <= horizon)
+    ]
     if not sums:
         return [None] * len(rows)
     spells = sum((row.events or 0) + (row.censored or 0) for row in rows)
