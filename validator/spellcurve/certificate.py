@@ -26,8 +26,8 @@ _DISAGREEMENT = (
 )
 _LIMITS = (
     "This says nothing of other data, of how spells were made of your own tables, or of other versions: "
-    "`spellcurve check` looks at your own figures, and a new version of engine, adapter or package needs a new "
-    "certificate."
+    "`spellcurve check` looks at your own figures, and a new version of engine, adapter or package needs a "
+    "new certificate."
 )
 
 
