@@ -148,6 +148,19 @@ class DuckDB(Engine):
         return [dict(zip(names, values, strict=True)) for values in cursor.fetchall()]
 
 
+class KeptDuckDB(DuckDB):
+    """DuckDB with a database file, so that what dbt builds can be read afterwards."""
+
+    def output(self) -> dict[str, Any]:
+        return {"type": "duckdb", "path": str(self.scratch / "kept.duckdb"), "threads": 1}
+
+    @property
+    def connection(self) -> Any:
+        import duckdb
+
+        return duckdb.connect(str(self.scratch / "kept.duckdb"))
+
+
 class PostgreSQL(Engine):
     name = "postgres"
     types = DuckDB.types | {"double": "double precision", "text": "text"}

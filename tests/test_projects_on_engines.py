@@ -6,23 +6,10 @@ import shutil
 from pathlib import Path
 
 import pytest
-from harness import ROOT, DuckDB, Engine, Rows
+from harness import ROOT, Engine, KeptDuckDB, Rows
 from likeness import differences
 
 EVERYTHING = ["build", "--vars", "{spellcurve_demo: true, spellcurve_reference: true}"]
-
-
-class KeptDuckDB(DuckDB):
-    """DuckDB with a database file, so that what dbt builds can be read afterwards."""
-
-    def output(self) -> dict:
-        return {"type": "duckdb", "path": str(self.scratch / "kept.duckdb"), "threads": 1}
-
-    @property
-    def connection(self):
-        import duckdb
-
-        return duckdb.connect(str(self.scratch / "kept.duckdb"))
 
 
 @pytest.fixture(scope="module")

@@ -273,7 +273,8 @@ class _Checker:
             verdict = STALE
             notes.append(
                 "The model's SQL gives the right rows now, its table holds others: it was built before what "
-                f"it reads changed, or with other options; build it again.{expected.dated(rows)}"
+                "it reads changed or with other options, or was changed since; build it again."
+                f"{expected.dated(rows)}"
             )
         note = " ".join(one for one in notes if one)
         return CheckedCall(model.name, model.path, macro, verdict, comparisons, note)

@@ -72,37 +72,39 @@ def find_calls(sql: str, where: str) -> tuple[Call, ...]:
     """Find the calls in a compiled model, in order; errors as ``find_provenance``.
 
     A call which is all of the model is whole. Any other has to stand in parentheses, as the body of a CTE
-    or a subquery does; everything up to its closing parenthesis is its SQL.
+    or a subquery does; everything up to its closing parenthesis is its SQL. Calls of ephemeral models,
+    whose SQL dbt puts in front, are left to those.
     """
-    calls = []
+    injected = _injected(sql)
+    places = []
     end = 0
-    every = find_provenance(sql, where)
-    for provenance in every:
+    for provenance in find_provenance(sql, where):
         start = sql.index("/* spellcurve {", end)
         end = sql.index("*/", start) + 2
-        depth, close = _depth(sql, start), _closing(sql, start)
-        if depth == 0 and len(every) == 1 and not _code(sql[:start]).strip():
-            calls.append(Call(provenance, sql, whole=True))
-        elif (
-            named := re.search(r'([\w$]+|"[^"]+"|`[^`]+`)\s+as\s+\(\s*$', _code(sql[:start]), re.I)
-        ) and depth == 1:
-            opening, closing = sql[:start], f") select * from {named[1]}"
-            ctes = frozenset(name.lower() for name in re.findall(r"([\w$]+)\s+as\s+\(", _code(opening)))
-            calls.append(
-                Call(
-                    provenance,
-                    opening + sql[start:close] + closing,
-                    False,
-                    opening,
-                    closing,
-                    ctes - {named[1].lower()},
-                )
-            )
-        elif depth > 0:
-            calls.append(Call(provenance, sql[start:close], False))
-        else:
-            calls.append(Call(provenance, "", False))
-    return tuple(calls)
+        if not any(start in span for span in injected):
+            places.append((provenance, start))
+    return tuple(_call(sql, provenance, start, len(places) == 1) for provenance, start in places)
+
+
+def _call(sql: str, provenance: Provenance, start: int, alone: bool) -> Call:
+    before = _code(sql[:start])
+    depth, close = _depth(sql, start), _closing(sql, start)
+    if depth == 0 and alone and not before.strip():
+        return Call(provenance, sql, whole=True)
+    if depth == 0:
+        return Call(provenance, "", False)
+    named = re.search(r"([\w$]+|\"[^\"]+\"|`[^`]+`)\s+as\s+\(\s*$", before, re.IGNORECASE)
+    if named is None or depth > 1:
+        return Call(provenance, sql[start:close], False)
+    opening, closing = sql[:start], f") select * from {named[1]}"
+    ctes = {name.lower() for name in re.findall(r"([\w$]+)\s+as\s+\(", before)} - {named[1].lower()}
+    return Call(provenance, opening + sql[start:close] + closing, False, opening, closing, frozenset(ctes))
+
+
+def _injected(sql: str) -> list[range]:
+    """Where dbt has put the SQL of ephemeral models: it is theirs, whatever it calls."""
+    heads = re.finditer(r"\b__dbt__cte__\w+\s+as\s+\(", sql)
+    return [range(head.end(), _closing(sql, head.end())) for head in heads]
 
 
 _TOKEN = re.compile(r"/\*.*?\*/|--[^\n]*|'(?:[^']|'')*'|\"[^\"]*\"|`[^`]*`|[()]", re.DOTALL)

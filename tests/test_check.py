@@ -1,0 +1,303 @@
+"""`spellcurve check` on real projects: the corpus on every engine, the consumer repo whole and broken."""
+
+from __future__ import annotations
+
+import json
+import re
+from pathlib import Path
+from xml.etree import ElementTree as xml
+
+import duckdb
+import pytest
+import spellcurve
+from corpus import Case, all_cases
+from harness import KeptDuckDB
+from proof import write_project
+from spellcurve.check import AGREES, DISAGREES, STALE, UNCHECKED, CheckedCall, CheckError, check_project
+from spellcurve.cli import app
+from spellcurve.project import Project, find_calls
+from test_consumer import PACKAGE, Consumer, copied_to
+from typer.testing import CliRunner
+
+# The corpus
+
+
+def one_call_of_each_macro() -> list[Case]:
+    """The corpus cut down to the first call of every macro, with the tables that these need."""
+    seen: set[str] = set()
+    cases = []
+    for case in all_cases():
+        calls = []
+        for call in case.calls:
+            macro = call.split("(")[0]
+            if macro not in seen and not macro.startswith("test_"):
+                seen.add(macro)
+                calls.append(call)
+        made = {name: call for name, call in case.made.items() if any(f"'{name}'" in one for one in calls)}
+        if calls:
+            cases.append(Case(case.name, case.tables, calls, made))
+    return cases
+
+
+def checked(engine, folder: Path, cases: list[Case]) -> list[CheckedCall]:
+    proof = write_project(engine, folder / "project", cases)
+    outcome, said = engine.dbt(["run"], proof.folder)
+    assert outcome.success, "\n".join(said[-5:])
+    found = check_project(proof.folder, profiles_dir=engine.scratch, target=engine.name)
+    assert {call.model for call in found.calls} == set(proof.cases)
+    return list(found.calls)
+
+
+def assert_agreement(calls: list[CheckedCall]) -> None:
+    wrong = [
+        f"{c.model} {c.macro}: {c.verdict} {c.note} {c.sentences[:3]}" for c in calls if c.verdict != AGREES
+    ]
+    assert not wrong, "\n".join(wrong)
+
+
+def test_every_call_of_the_corpus_is_recomputed_and_agrees(tmp_path_factory, tmp_path):
+    calls = checked(KeptDuckDB(tmp_path_factory.mktemp("kept")), tmp_path, all_cases())
+    assert_agreement(calls)
+    assert sum(call.figures for call in calls) > 100_000
+
+
+def test_every_macro_is_recomputed_and_agrees_on_the_other_engines(other_engine, tmp_path):
+    assert_agreement(checked(other_engine, tmp_path, one_call_of_each_macro()))
+
+
+# The consumer repo
+
+
+@pytest.fixture
+def consumer(tmp_path, monkeypatch) -> Consumer:
+    made = copied_to(tmp_path / "repo", monkeypatch)
+    made.build()
+    return made
+
+
+def check(consumer: Consumer, *options: str) -> tuple[int, str]:
+    """Run the command as a user would; returns its exit status and what it printed."""
+    place = ["--project-dir", str(consumer.folder), "--profiles-dir", str(consumer.folder)]
+    done = CliRunner(env={"COLUMNS": "200"}).invoke(app, ["check", *place, *options])
+    return done.exit_code, done.output
+
+
+def verdicts(consumer: Consumer, *select: str, **options) -> dict[str, CheckedCall]:
+    found = check_project(consumer.folder, profiles_dir=consumer.folder, select=select, **options)
+    return {call.model: call for call in found.calls}
+
+
+def execute(consumer: Consumer, sql: str) -> None:
+    with duckdb.connect(str(consumer.folder / "harrow_lane.duckdb")) as connection:
+        connection.execute(sql)
+
+
+def test_a_project_whose_figures_are_right_passes(consumer, tmp_path):
+    before = table_states(consumer)
+    status, said = check(
+        consumer, "--junit", str(tmp_path / "a" / "j.xml"), "--json", str(tmp_path / "c.json")
+    )
+    assert status == 0, said
+    assert "6 models on duckdb" in said and "6 agrees" in said
+    assert table_states(consumer) == before
+    suite = xml.parse(tmp_path / "a" / "j.xml").getroot()
+    assert (suite.get("tests"), suite.get("failures"), suite.get("errors")) == ("6", "0", "0")
+    content = json.loads((tmp_path / "c.json").read_text())
+    assert content["exit_status"] == 0 and {call["verdict"] for call in content["calls"]} == {AGREES}
+    by_model = {call["model"]: call for call in content["calls"]}
+    assert by_model["membership_curve"]["figures"] > 100
+    assert "part of a larger model" in by_model["returning_member_curve"]["note"]
+
+
+def table_states(consumer: Consumer) -> list[tuple]:
+    with duckdb.connect(str(consumer.folder / "harrow_lane.duckdb")) as connection:
+        return connection.sql(
+            "select table_schema, table_name, table_type from information_schema.tables order by all"
+        ).fetchall()
+
+
+def break_the_curve(consumer: Consumer) -> None:
+    """Put a macro of the repo's own in the package's place, with a survival that is 1% too low."""
+    source = (PACKAGE / "macros" / "estimates" / "survival_curve.sql").read_text()
+    own = source[source.index("{% macro default__survival_curve") :]
+    right = "end as survival,"
+    assert own.count(right) == 1
+    own = own.replace("macro default__", "macro harrow_lane_analytics__").replace(
+        right, "end * 0.99 as survival,"
+    )
+    consumer.write("macros/survival_curve.sql", own)
+    project = (consumer.folder / "dbt_project.yml").read_text()
+    order = "search_order: ['harrow_lane_analytics', 'spellcurve']"
+    consumer.write("dbt_project.yml", f"{project}\ndispatch:\n  - macro_namespace: spellcurve\n    {order}\n")
+    consumer.build("--select", "membership_curve", "--exclude", "resource_type:test")
+
+
+def test_a_broken_curve_turns_ci_red_with_a_message_that_a_stranger_understands(consumer, tmp_path):
+    break_the_curve(consumer)
+    status, said = check(consumer, "--select", "membership_curve", "--junit", str(tmp_path / "j.xml"))
+    assert status == 1
+    assert "membership_curve (models/members/membership_curve.sql): disagrees" in said
+    assert re.search(r"survival at plan = \S+, duration 0 is 0\.99, but 1 is expected", said)
+    assert "macros of yours that take the place of the package's" in said
+    [failure] = xml.parse(tmp_path / "j.xml").getroot().iter("failure")
+    assert failure.get("type") == DISAGREES
+    assert "things are wrong" in failure.get("message") and "0.99, but 1 is expected" in failure.text
+
+
+TAMPERED = [
+    ("update analytics.membership_curve set at_risk = at_risk + 1 where duration = 0", "at_risk at plan"),
+    ("delete from analytics.membership_curve where duration = 0", "is missing from the table"),
+    ("insert into analytics.membership_curve from analytics.membership_curve limit 1", "more than once"),
+    (
+        "update analytics.membership_curve set duration = 99999 where duration = 0",
+        "should not be in the table",
+    ),
+    ("update analytics.membership_curve set survival_lower = null where survival < 1", "is null, but"),
+    ("update analytics.membership_curve set std_error = 'nan' where duration = 0", "no finite number"),
+    ("alter table analytics.membership_curve drop hazard", "The table has no column hazard"),
+]
+
+
+def test_what_is_wrong_with_a_table_is_named(consumer):
+    for sql, sentence in TAMPERED:
+        consumer.build("--select", "membership_curve")
+        execute(consumer, sql)
+        found = verdicts(consumer, "membership_curve")["membership_curve"]
+        # the model's own SQL would still give the right rows
+        assert found.verdict == STALE, sql
+        assert any(sentence in one for one in found.sentences), (sentence, found.sentences[:3])
+
+
+def test_a_curve_that_is_older_than_its_spells_is_called_stale(consumer):
+    execute(consumer, "update analytics.membership_spells set duration = duration + 1 where event = 0")
+    found = verdicts(consumer, "membership_curve")["membership_curve"]
+    assert found.verdict == STALE and "build it again" in found.note
+
+
+def test_spells_as_of_another_day_are_called_stale(consumer):
+    model = consumer.folder / "models" / "members" / "membership_spells.sql"
+    model.write_text(model.read_text().replace("as_of='2024-07-01'", "as_of='2024-06-20'"))
+    found = verdicts(consumer, "membership_spells")["membership_spells"]
+    assert found.verdict == STALE
+    assert "last seen at 2024-06-17" in found.note and "would be at 2024-06-06" in found.note
+
+
+def test_wrong_spells_are_named(consumer):
+    model = consumer.folder / "models" / "members" / "membership_spells.sql"
+    model.write_text(
+        "{{ config(post_hook='update {{ this }} set entry = entry + 1 where entry > 0') }}\n"
+        + model.read_text()
+    )
+    consumer.build("--select", "membership_spells", "--exclude", "resource_type:test")
+    found = verdicts(consumer, "membership_spells")["membership_spells"]
+    assert found.verdict == STALE
+    assert any(sentence.startswith("entry of the spell with subject_id") for sentence in found.sentences)
+
+
+def test_models_of_every_form_are_checked(consumer):
+    """Ephemeral spells, a macro of the repo's own around the package's, quoted columns, two calls in one."""
+    consumer.write(
+        "macros/own.sql",
+        "{% macro own_curve(spells) %}{{ spellcurve.survival_curve(spells, by='\"Plan\"') }}{% endmacro %}",
+    )
+    consumer.write(
+        "models/more/loose_spells.sql",
+        "{{ config(materialized='ephemeral') }}\n"
+        "{{ spellcurve.spells_from_intervals(ref('stg_memberships'), 'member_id', 'joined_on', 'left_on',"
+        " as_of='2024-07-01', carry=['plan']) }}",
+    )
+    consumer.write(
+        "models/more/renamed_spells.sql",
+        '{{ config(materialized="view") }}\n'
+        'select plan as "Plan", entry, duration, event, weight from {{ ref("loose_spells") }}',
+    )
+    consumer.write("models/more/own_curve.sql", "{{ own_curve(ref('renamed_spells')) }}")
+    consumer.write("models/more/loose_curve.sql", "{{ spellcurve.survival_curve(ref('loose_spells')) }}")
+    consumer.write(
+        "models/more/both.sql",
+        "with old as ({{ spellcurve.survival_curve(ref('membership_spells'), horizon=30) }}),\n"
+        "shares as ({{ spellcurve.survival_at('old', [7, 30]) }})\n"
+        "select * from shares",
+    )
+    consumer.build("--select", "path:models/more")
+    found = check_project(consumer.folder, profiles_dir=consumer.folder, select=["path:models/more"])
+    assert [(c.model, c.verdict, c.note) for c in found.calls if c.verdict != AGREES] == []
+    assert sorted((call.model, call.macro) for call in found.calls) == [
+        ("both", "survival_at"),
+        ("both", "survival_curve"),
+        ("loose_curve", "survival_curve"),
+        ("loose_spells", "spells_from_intervals"),
+        ("own_curve", "survival_curve"),
+    ]
+
+
+def test_what_cannot_be_checked_gives_exit_status_2_and_a_reason(consumer):
+    execute(consumer, "drop table analytics.membership_curve")
+    status, said = check(consumer, "--select", "membership_curve")
+    assert status == 2 and "build the model with dbt first" in said
+    status, said = check(consumer, "--select", "stg_memberships")
+    assert status == 2 and "calls a Spellcurve macro" in said
+    status, said = check(consumer, "--target", "nowhere")
+    assert status == 2 and "Could not run: dbt" in said and "nowhere" in said
+    status, said = check(consumer, "--vars", "[1]")
+    assert status == 2 and "--vars is" in said
+    done = CliRunner().invoke(app, ["check", "--project-dir", str(consumer.folder / "models")])
+    assert done.exit_code == 2 and "There is no dbt_project.yml" in done.output
+    with pytest.raises(ValueError, match="tolerance is"):
+        check_project(consumer.folder, tolerance=2)
+    with pytest.raises(CheckError, match=r"There is no dbt_project\.yml"):
+        spellcurve.check_project(consumer.folder / "models")
+
+
+def test_another_version_of_the_package_is_refused(consumer, monkeypatch):
+    monkeypatch.setattr(spellcurve, "__version__", "9.9.9")
+    found = verdicts(consumer, "membership_curve")["membership_curve"]
+    assert found.verdict == UNCHECKED and "install the same version of both" in found.note
+
+
+def test_a_curve_of_millions_pulls_no_more_rows_than_it_has_durations(consumer, monkeypatch):
+    consumer.write(
+        "models/more/many_spells.sql",
+        "select 'p' || (range % 3) as plan, 0 as entry, range % 97 as duration, range % 2 as event, "
+        "1 as weight from range(2000000)",
+    )
+    consumer.write(
+        "models/more/many_curve.sql", "{{ spellcurve.survival_curve(ref('many_spells'), by='plan') }}"
+    )
+    consumer.build("--select", "path:models/more")
+    pulled = []
+    query = Project.query
+
+    def counted(project: Project, sql: str) -> list:
+        rows = query(project, sql)
+        pulled.append(len(rows))
+        return rows
+
+    monkeypatch.setattr(Project, "query", counted)
+    assert verdicts(consumer, "many_curve")["many_curve"].verdict == AGREES
+    assert sum(pulled) <= 2 * 3 * 97 + 3 * 97
+
+
+# Where calls stand in SQL
+
+COMMENT = '/* spellcurve {"macro": "survival_curve", "version": "0.1.0", "spells": "x", "by": []} */'
+
+
+@pytest.mark.parametrize(
+    ("sql", "whole", "text"),
+    [
+        (f"\n-- a note (of ours)\n{COMMENT}\nselect 1", True, None),
+        (
+            f"with x as (select ')'), y as ({COMMENT} select (1)) select * from y",
+            False,
+            "select (1)) select * from y",
+        ),
+        (f"select * from ({COMMENT} select (1)) as z", False, f"{COMMENT} select (1)"),
+        (f"{COMMENT} select 1 union all {COMMENT} select 2", False, ""),
+        (f"select 1 union all {COMMENT} select 2", False, ""),
+    ],
+)
+def test_calls_are_found_wherever_they_stand(sql, whole, text):
+    call = find_calls(sql, "it")[0]
+    assert call.whole == whole
+    assert call.sql.endswith(sql if text is None else text) and (text != "" or call.sql == "")
