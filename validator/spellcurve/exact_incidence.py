@@ -467,7 +467,9 @@ def gray_test(
         for k in range(size):
             for i in range(size):
                 to_come[k][i] = rounded(to_come[k][i] + direct[k][i] * weight, digits)
-    statistic, rank = quadratic_form(scores, covariance)
+    statistic, rank = quadratic_form(
+        scores, covariance, 0 if digits is None else Fraction(1, 10 ** (digits // 2))
+    )
     return GrayTest(tuple(scores), tuple(map(tuple, covariance)), statistic if rank else None, rank, observed)
 
 
@@ -529,13 +531,16 @@ class _Course:
 
 
 def quadratic_form(
-    scores: Sequence[Fraction], covariance: Sequence[Sequence[Fraction]]
+    scores: Sequence[Fraction], covariance: Sequence[Sequence[Fraction]], negligible: Fraction | int = 0
 ) -> tuple[Fraction, int]:
-    """Return s' V⁻ s by elimination, passing over pivots of 0, and the rank of V."""
+    """Return s' V⁻ s by elimination, passing over pivots of 0, and the rank of V.
+
+    A pivot that is no more than ``negligible`` times the variance it is left of counts as 0.
+    """
     v, s = [list(row) for row in covariance], list(scores)
     total, rank = Fraction(0), 0
     for p in range(len(s)):
-        if v[p][p] == 0:
+        if v[p][p] <= negligible * covariance[p][p]:
             continue
         rank += 1
         total += s[p] ** 2 / v[p][p]
