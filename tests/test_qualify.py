@@ -106,17 +106,10 @@ def test_an_engine_is_qualified_and_left_as_it_was(warehouse, tmp_path):
     assert "This says nothing of other data" in page
     assert not re.search("disagree|not found", page, re.I)
 
-
-def test_nothing_of_the_connection_is_told(started, tmp_path_factory, tmp_path, request):
-    if "postgres" not in started:
-        pytest.skip("no server was started")
-    server = started["postgres"]
-    done = run("--profile", "spellcurve", "--profiles-dir", server.scratch, "-o", tmp_path)
-    assert done.exit_code == 0, done.output
-    told = done.output + "".join(path.read_text(encoding="utf-8") for path in tmp_path.glob("*.*"))
-    given = server.output()
-    for secret in (given["host"], f"{given['port']}", given["password"]):
-        assert secret == "none" or str(secret) not in told
+    if warehouse.name == "postgres":
+        given, told = warehouse.output(), done.output + page + data.read_text(encoding="utf-8")
+        assert given["host"] not in told and given["dbname"] not in there.values()
+        assert given["password"] == "none" or given["password"] not in told
 
 
 # Cleaning up
@@ -132,7 +125,9 @@ def options(package: Path) -> list[str | Path]:
     return ["--profile", "spellcurve", "--profiles-dir", package, "--package", package]
 
 
-def test_keep_leaves_the_scratch_schema_and_nothing_else_is_written(package, tmp_path):
+def test_keep_leaves_the_scratch_schema_and_nothing_else_is_written(package, tmp_path, monkeypatch):
+    monkeypatch.setenv("DBT_STORE_FAILURES", "true")  # dbt would write to a schema of its own
+    monkeypatch.setenv("DBT_ENGINE_WARN_ERROR", "true")
     database = package / "published.duckdb"
     with duckdb.connect(str(database)) as connection:
         connection.execute("create schema reference; create table reference.reference_remission (mine int)")
@@ -145,6 +140,8 @@ def test_keep_leaves_the_scratch_schema_and_nothing_else_is_written(package, tmp
     with duckdb.connect(str(database)) as connection:
         assert connection.sql("from reference.reference_remission").columns == ["mine"]
         connection.execute(f"drop schema {schema} cascade; drop schema reference cascade")
+    assert duckdb_schemas(database) == {"information_schema", "main", "pg_catalog"}
+    assert os.environ["DBT_STORE_FAILURES"] == "true"
 
 
 def test_a_schema_that_is_there_already_is_not_touched(package, tmp_path, monkeypatch):
@@ -189,6 +186,28 @@ def test_a_model_that_cannot_be_built_is_named_and_cleaned_up_after(tmp_path):
     assert "Could not run: reference_remission_curve could not be built: " in done.output
     assert "no_such_column" in done.output and done.output.count("\n") <= 2
     assert not (tmp_path / "certificates").exists()
+    assert not {one for one in duckdb_schemas(package / "published.duckdb") if "spellcurve" in one}
+
+
+def test_a_name_that_a_warehouse_would_cut_short_is_refused(package, tmp_path):
+    profile = (package / "profiles.yml").read_text().replace("schema: reference", f"schema: {'r' * 60}")
+    (tmp_path / "profiles.yml").write_text(profile)
+    done = run("--profile", "spellcurve", "--profiles-dir", tmp_path, "--package", package, "-o", tmp_path)
+    assert done.exit_code == 2 and "use a target with a shorter schema." in done.output
+    assert not {one for one in duckdb_schemas(package / "published.duckdb") if "rrr" in one}
+
+
+def test_a_schema_is_dropped_also_where_dbt_was_left_without_an_adapter(package):
+    """As after an interruption while dbt makes a new one."""
+    from dbt.adapters.factory import FACTORY
+
+    def announce(doing: str, done: int, of: int) -> None:
+        if done == 2:
+            FACTORY.reset_adapters()
+            raise RuntimeError("in between")
+
+    with pytest.raises(RuntimeError, match="in between"):
+        spellcurve.qualify(profile="spellcurve", profiles_dir=package, package=package, announce=announce)
     assert not {one for one in duckdb_schemas(package / "published.duckdb") if "spellcurve" in one}
 
 

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import importlib
 import importlib.metadata
+import os
 import re
 import secrets
 import signal
@@ -32,6 +33,8 @@ ENABLED, SCRATCH = "spellcurve_reference", "spellcurve_scratch"
 SELECTED = ("path:models/reference", "path:seeds/reference")
 #: Models that lay figures side by side and compute none.
 SUMMARIES = ("reference_figures", "reference_agreement")
+#: Some warehouses cut longer names short, and might then meet a schema that is somebody's.
+LONGEST_NAME = 63
 _KEPT = "It was kept, as asked for."
 _NOT_TOLD = "not told by the warehouse"
 #: What may lie between a computed figure and half a unit of the last printed place.
@@ -227,7 +230,7 @@ def qualify(
                 target,
                 {ENABLED: True, SCRATCH: f"spellcurve_{secrets.token_hex(4)}"},
             )
-            with _interruptions(warehouse):
+            with _settings_put_aside(), _interruptions(warehouse):
                 return _qualify(warehouse, folder, sources, published, keep, announce)
     except (ProjectError, FileNotFoundError) as error:
         raise QualificationError(str(error)) from error
@@ -297,15 +300,14 @@ def _profile(
     project_dir: Path, profiles_dir: str | Path | None, profile: str | None
 ) -> tuple[str, Path | None]:
     """The profile of the user's project, and where profiles.yml is if that is not for dbt to find."""
-    import os
-
     import yaml  # dbt depends on it
 
     project_dir = project_dir.expanduser()
     place = Path(profiles_dir).expanduser().resolve() if profiles_dir is not None else None
     if place is None and "DBT_PROFILES_DIR" not in os.environ and (project_dir / "profiles.yml").is_file():
         place = project_dir.resolve()
-    if profile is not None:
+    profile = profile or os.environ.get("DBT_PROFILE")
+    if profile:
         return profile, place
     path = project_dir / "dbt_project.yml"
     if not path.is_file():
@@ -359,6 +361,11 @@ class _Warehouse(Project):
                 f"the package of the validator's version, which {self.folder} is not."
             )
         ((self.database, self.schema),) = places
+        if len(self.schema) > LONGEST_NAME:
+            raise ProjectError(
+                f"The scratch schema would be named {self.schema}, longer than the {LONGEST_NAME} letters "
+                "that every warehouse keeps; use a target with a shorter schema."
+            )
 
     def claim(self) -> None:
         """Make sure that the scratch schema is not there yet; from then on it is ours."""
@@ -418,17 +425,51 @@ class _Warehouse(Project):
         """Drop the scratch schema; says in one sentence why that failed, or nothing."""
         if not self.claimed:
             return ""
+        reason = ""
         with _undisturbed():
-            try:
-                self._connect()  # the adapter of the last run of dbt
-                relation = self._adapter.Relation.create(database=self.database, schema=self.schema)
-                with self.connection():
-                    self._adapter.drop_schema(relation)
-                with self.connection():
-                    there = self._adapter.check_schema_exists(self.database, self.schema)
-            except Exception as error:  # every adapter raises its own
-                return f"It could not be dropped ({_one_line(error)}); drop it yourself."
+            self.interrupted = False
+            for attempt in range(2):
+                try:
+                    if attempt:
+                        self.dbt("parse")  # an interruption may have left dbt without an adapter
+                    self._connect()
+                    return self._drop()
+                except Exception as error:  # every adapter raises its own
+                    reason = _one_line(error)
+        return f"It could not be dropped ({reason}); drop it yourself."
+
+    def _drop(self) -> str:
+        relation = self._adapter.Relation.create(database=self.database, schema=self.schema)
+        with self.connection():
+            self._adapter.drop_schema(relation)
+        with self.connection():
+            there = self._adapter.check_schema_exists(self.database, self.schema)
         return "It is still there after it was dropped; drop it yourself." if there else ""
+
+
+#: Settings of dbt in the environment that say where to connect; all others are put aside.
+_KEPT_SETTINGS = ("PROFILES_DIR", "PROFILE", "TARGET")
+
+
+@contextmanager
+def _settings_put_aside() -> Iterator[None]:
+    """Keep the user's settings of dbt out: stored failures would be written elsewhere, warnings be errors.
+
+    Only variables that dbt itself reads are put aside; a profile may read others that begin like them.
+    """
+    from dbt.cli.main import cli
+
+    parameters = [*cli.params, *(one for command in cli.commands.values() for one in command.params)]
+    names = set()
+    for parameter in parameters:
+        given = parameter.envvar or ()
+        names |= {given} if isinstance(given, str) else set(given)
+    kept = {f"{start}{name}" for name in _KEPT_SETTINGS for start in ("DBT_", "DBT_ENGINE_")}
+    aside = {name: os.environ.pop(name) for name in names - kept if name in os.environ}
+    try:
+        yield
+    finally:
+        os.environ.update(aside)
 
 
 def _version_of_adapter(adapter: str) -> str:
