@@ -100,7 +100,7 @@ numbered_risk_sets as (
         case when {{ is_reference }} then 1 else 0 end as is_reference,
         {%- endif %}
         duration, at_risk, events,
-        sum(events) over ({{ spellcurve._partition_by(compared.segments + compared.strata_aliases + ['duration']) | trim }}) as all_events
+        sum(events) over ({{ spellcurve._throughout(compared.segments + compared.strata_aliases + ['duration']) }}) as all_events
     from risk_sets
 ),
 
@@ -108,9 +108,9 @@ counted_risk_sets as (
     select
         {{ each }}group_label, group_number, stratum, duration, at_risk, events, all_events,
         {%- if is_reference is not none %}
-        max(case when is_reference = 1 then group_number end) over ({{ segment | trim }}) as reference_number,
+        max(case when is_reference = 1 then group_number end) over ({{ spellcurve._throughout(compared.segments) }}) as reference_number,
         {%- endif %}
-        max(group_number) over ({{ segment | trim }}) as group_count
+        max(group_number) over ({{ spellcurve._throughout(compared.segments) }}) as group_count
     from numbered_risk_sets
 ),
 
@@ -143,9 +143,9 @@ cells_with_steps_to_come as (
 full_cells as (
     select
         {{ each }}stratum, duration, group_number, group_count, reference_number, events, all_events,
-        max(group_label) over ({{ spellcurve._partition_by(compared.segments + ['group_number']) | trim }}) as group_label,
+        max(group_label) over ({{ spellcurve._throughout(compared.segments + ['group_number']) }}) as group_label,
         coalesce(max(own_at_risk) over (
-            {{ spellcurve._partition_by(compared.segments + ['stratum', 'group_number', 'steps_to_come']) | trim }}
+            {{ spellcurve._throughout(compared.segments + ['stratum', 'group_number', 'steps_to_come']) }}
         ), 0) as at_risk
     from cells_with_steps_to_come
 ),
@@ -153,7 +153,7 @@ full_cells as (
 cells_at_events as (
     select
         {{ each }}stratum, duration, group_number, group_count, reference_number, group_label, at_risk, events, all_events,
-        sum(at_risk) over ({{ spellcurve._partition_by(compared.segments + ['stratum', 'duration']) | trim }}) as all_at_risk
+        sum(at_risk) over ({{ spellcurve._throughout(compared.segments + ['stratum', 'duration']) }}) as all_at_risk
     from full_cells
     where all_events > 0 or duration = 0
 ),

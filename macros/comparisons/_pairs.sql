@@ -51,7 +51,7 @@
             when {{ condition }} then {{ p_value }}
             {%- else %}
             when {{ condition }} and {{ p_value }} is not null
-                then least(1, {{ p_value }} * count({{ p_value }}) over ({{ spellcurve._partition_by(family) | trim }}))
+                then least(1, {{ p_value }} * count({{ p_value }}) over ({{ spellcurve._throughout(family) }}))
             {%- endif %}
         end as {{ p_value }}_adjusted
     from {{ cte }}
@@ -62,7 +62,7 @@ ranked_for_{{ name }} as (
     select
         *,
         row_number() over ({{ spellcurve._partition_by(family) }}{{ smallest_first }}) as {{ p_value }}_rank,
-        count({{ p_value }}) over ({{ spellcurve._partition_by(family) | trim }}) as {{ p_value }}_count
+        count({{ p_value }}) over ({{ spellcurve._throughout(family) }}) as {{ p_value }}_count
     from {{ cte }}
 ),
 

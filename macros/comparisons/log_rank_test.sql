@@ -142,7 +142,7 @@ sums_with_total as (
     select
         *,
         sum(case when first_group = second_group then first_observed else 0 end) over (
-            {{ spellcurve._partition_by(segments) | trim }}
+            {{ spellcurve._throughout(segments) }}
         ) as all_observed
     from sums
 ),

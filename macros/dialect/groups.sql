@@ -6,3 +6,8 @@
 {% macro default___most_groups() %}
     {{ return(50) }}
 {% endmacro %}
+
+{# Spark goes over a plan 100 times at most before it gives up, unless spark.sql.analyzer.maxIterations says more. #}
+{% macro spark___most_groups() %}
+    {{ return(20) }}
+{% endmacro %}

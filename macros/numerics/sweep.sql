@@ -8,22 +8,23 @@
     nothing is exactly 0 (Grassmann, Taksar and Heyman 1985, who do so for Markov chains). It is passed over: what remains is
     a generalised inverse. At the end (0, 0) holds the quadratic form of the scores, and rank_so_far the rank.
     Each CTE reads the one before once: row, column and pivot come by windows over the same rows. Rows at (-1, -1) stay as they are.
+    Windows and numbers need nothing made up for them (see _throughout): an engine may go over each CTE three times otherwise.
 #}
 {% macro _eliminate(name, pivots, segments, carried) -%}
-{%- set by_row = spellcurve._partition_by(segments + ['row_at']) -%}
-{%- set by_column = spellcurve._partition_by(segments + ['column_at']) -%}
-{%- set everywhere = spellcurve._partition_by(segments) | trim -%}
+{%- set by_row = spellcurve._throughout(segments + ['row_at']) -%}
+{%- set by_column = spellcurve._throughout(segments + ['column_at']) -%}
+{%- set everywhere = spellcurve._throughout(segments) -%}
 {%- for s in range(1, pivots + 1) -%}
 {{ name }}_{{ s }} as (
     select
         {{ carried }}, row_at, column_at,
         {%- set pivot = 'sum(case when row_at = ' ~ s ~ ' and column_at > ' ~ s ~ ' then figure end) over (' ~ everywhere ~ ')' %}
         figure + coalesce(
-            max(case when column_at = {{ s }} then figure end) over ({{ by_row | trim }})
-            / case when {{ pivot }} > 0 then {{ pivot }} end
-            * max(case when row_at = {{ s }} then figure end) over ({{ by_column | trim }}), 0
+            max(case when column_at = {{ s }} then figure end) over ({{ by_row }})
+            / case when {{ pivot }} > 0e0 then {{ pivot }} end
+            * max(case when row_at = {{ s }} then figure end) over ({{ by_column }}), 0e0
         ) as figure,
-        rank_so_far + case when {{ pivot }} > 0 then 1 else 0 end as rank_so_far
+        rank_so_far + case when {{ pivot }} > 0e0 then 1 else 0 end as rank_so_far
     from {{ name }}_{{ s - 1 }}
     {%- if s > 1 %}
     where row_at <> {{ s - 1 }} and column_at <> {{ s - 1 }}
