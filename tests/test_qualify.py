@@ -13,6 +13,7 @@ import duckdb
 import pytest
 import spellcurve
 from harness import ROOT, Engine
+from spellcurve import package as package_module
 from spellcurve import qualification
 from spellcurve.cli import app
 from spellcurve.package import find_package
@@ -364,5 +365,12 @@ def test_a_row_that_is_doubled_or_unheard_of_in_the_warehouse_disagrees():
     assert verdicts(found, found | {"duration": 11}) == ["agrees", "disagrees"]
 
 
-def test_the_package_is_found():
+def test_the_package_is_found_in_the_checkout_or_beside_the_code_or_reported_missing(tmp_path, monkeypatch):
     assert find_package() == ROOT
+    monkeypatch.setattr(package_module, "__file__", str(tmp_path / "a" / "b" / "package.py"))
+    with pytest.raises(FileNotFoundError, match="install the spellcurve package again"):
+        find_package()
+    beside = tmp_path / "a" / "b" / "dbt_package"
+    beside.mkdir(parents=True)
+    (beside / "dbt_project.yml").write_text("name: spellcurve\n")
+    assert find_package() == beside
