@@ -244,6 +244,29 @@ def test_many_subjects_over_many_durations(engine):
         assert close(found[t]["mean_count"], mean[t]) and close(found[t]["std_error"], math.sqrt(exact[t]))
 
 
+@pytest.mark.parametrize("alike", [10**3, 10**6])
+def test_subjects_who_hardly_differ(engine, alike):
+    """All of very many have the same events, and one has others: a variance far below the squared mean."""
+    row = {
+        "plan": "a",
+        "entry": 0,
+        "duration": 9,
+        "started_at": START,
+        "last_seen_at": START + timedelta(days=9),
+    }
+    spells = [row | {"subject_id": "many", "weight": alike}, row | {"subject_id": "one", "weight": 1}]
+    spells += [row | {"subject_id": "late", "weight": 2, "entry": 3}]
+    days = {"many": [0, 1, 1, 4, 8], "one": [2, 7], "late": [4, 6]}
+    events = [
+        {"who": who, "at": (START + timedelta(days=day)).isoformat()} for who in days for day in days[who]
+    ]
+    engine.load("spells", SPELLS, spells)
+    engine.load("events", EVENTS, events)
+    expected = expected_rows(spells, dict(enumerate(days.values())), [])
+    assert min(row.robust_variance / row.mean_count**2 for row in expected.values()) < Fraction(3, alike)
+    compare(engine.run(call([])), expected, [])
+
+
 def robust_in_decimals(spells: list[dict], tenures: dict[str, list[int]]) -> tuple[dict, dict, dict]:
     """The definition term by term with fractions rounded to 60 digits."""
     from spellcurve.exact_incidence import rounded

@@ -84,8 +84,11 @@ figures as (
         {% if variance == 'poisson' -%}
         sqrt(naive_variance)
         {%- else -%}
-        -- what is left of the sums by rounding alone is no variance
-        sqrt(case when robust_variance > 1e-13 * size_of_terms then robust_variance else 0 end)
+        -- what rounding alone leaves is no variance
+        sqrt(case
+            when robust_variance > 1e-13 * size_of_terms and robust_variance > 1e-22 * mean_count * naive_variance then robust_variance
+            else 0
+        end)
         {%- endif %} as root_of_variance
     from variances
 ),
@@ -279,7 +282,8 @@ rows_judged as (
 
 {#
     From `rows_judged` to `counts_with_sums`: one row a group, subject and duration at which something changes for the subject, each with the
-    number at risk then (n), the mean count M = sum of d/n and the naive variance L = sum of d/n^2. A subject's spells run on one clock.
+    number at risk then (n), the mean count M = sum of d/n and, without the step d/n^2 of the duration itself, the naive variance L = sum of d/n^2.
+    A subject's spells run on one clock.
 #}
 {% macro _count_risk_sets(groups) %}
     {%- set each_group = spellcurve._each_then_comma(groups) -%}
@@ -353,93 +357,118 @@ counts_at_risk as (
 
 count_steps as (
     select
-        {{ subject_key }}, duration, happened, leaving, joining, starting, is_step, events, at_risk,
-        case when at_risk > 0 then happened / at_risk else 0 end as own_step,
-        case when place = 1 and at_risk > 0 then events / at_risk else 0 end as mean_step,
-        case when place = 1 and at_risk > 0 then events / at_risk / at_risk else 0 end as naive_step
+        {{ subject_key }}, duration, happened, leaving, joining, starting, is_step, events, at_risk, place,
+        case when at_risk > 0 then events / at_risk / at_risk else 0 end as naive_step,
+        case when place = 1 and at_risk > 0 then events / at_risk else 0 end as mean_step
     from counts_at_risk
 ),
 
 {% set so_far = partition ~ 'order by duration range between unbounded preceding and current row' -%}
+{%- set before = partition ~ 'order by duration, place desc rows between unbounded preceding and 1 preceding' -%}
 counts_with_sums as (
     select
-        {{ subject_key }}, duration, happened, leaving, joining, starting, is_step, events, at_risk, own_step,
+        {{ subject_key }}, duration, happened, leaving, joining, starting, is_step, events, at_risk, naive_step,
         sum(mean_step) over ({{ so_far }}) as mean_count,
-        sum(naive_step) over ({{ so_far }}) as naive_variance
+        -- of the rows of a duration the last brings its step, so that none counts it as before itself
+        coalesce(sum(case when place = 1 then naive_step else 0 end) over ({{ before }}), 0) as naive_before
     from count_steps
 )
 {%- endmacro %}
 
 
 {#
-    From `counts_with_sums` to `variances`. A subject's term in the variance of Lawless and Nadeau is the square of a - r L(t), with r the
-    number of its spells at risk and a a number that only changes when something changes for the subject: 1/n at each of its events, L where
-    a spell joins, -L where one leaves. So the sums of a^2, a r and r^2 over subjects are running sums over those changes, and no
-    subject is laid out over all durations.
+    From `counts_with_sums` to `variances`. A subject's score is the sum of its steps (e - r d/n) / n, with e its events and r its spells at risk;
+    the variance of Lawless and Nadeau is the sum over subjects of squared scores. Between the changes of a subject (its events, and where its
+    spells begin and end) each step is -r d/n^2, so that its score falls by r times what L rises by. The sum of squares is kept up to date
+    duration by duration: the subjects that change are taken one by one, all others together, by their sums of r^2 and of r times score. So
+    no subject is laid out over all durations, and scores are small where subjects hardly differ, which keeps the digits of their squares.
 #}
 {% macro _count_variances(groups) %}
     {%- set each_group = spellcurve._each_then_comma(groups) -%}
     {%- set partition = spellcurve._partition_by(groups) -%}
     {%- set so_far = partition ~ 'order by duration rows between unbounded preceding and current row' -%}
+    {%- set before = partition ~ 'order by duration rows between unbounded preceding and 1 preceding' -%}
     {%- set of_subject = spellcurve._partition_by(groups + ['subject_id', 'unit_number', 'weight']) -%}
     {%- set subject_so_far = of_subject ~ 'order by duration rows between unbounded preceding and current row' -%}
-subject_steps as (
+    {%- set subject_before = of_subject ~ 'order by duration rows between unbounded preceding and 1 preceding' -%}
+    {%- set of_duration = 'is_step, events, at_risk, mean_count, naive_step, naive_before' -%}
+subject_risks as (
     select
-        {{ each_group }}subject_id, unit_number, weight, duration, is_step, events, at_risk, mean_count, naive_variance,
-        own_step + (joining - leaving) * naive_variance as a_step,
-        starting + joining - leaving as r_step
+        {{ each_group }}subject_id, unit_number, weight, duration, happened, leaving, joining, {{ of_duration }},
+        sum(starting + joining - leaving) over ({{ subject_so_far }}) as r_after,
+        lag(naive_before + naive_step) over ({{ of_subject }}order by duration) as last_naive
     from counts_with_sums
 ),
 
-subject_sums as (
+subject_turns as (
     select
-        {{ each_group }}subject_id, unit_number, weight, duration, is_step, events, at_risk, mean_count, naive_variance, a_step, r_step,
-        sum(a_step) over ({{ subject_so_far }}) as a,
-        sum(r_step) over ({{ subject_so_far }}) as r
-    from subject_steps
+        {{ each_group }}subject_id, unit_number, weight, duration, happened, {{ of_duration }}, last_naive, r_after,
+        r_after - joining + leaving as r_here,
+        coalesce(lag(r_after) over ({{ of_subject }}order by duration), 0) as r_before
+    from subject_risks
 ),
 
-subject_changes as (
+subject_steps as (
     select
-        {{ each_group }}weight, duration, is_step, events, at_risk, mean_count, naive_variance, a, a_step, r, r_step,
-        coalesce(lag(a) over ({{ of_subject }}order by duration), 0) as last_a,
-        coalesce(lag(r) over ({{ of_subject }}order by duration), 0) as last_r
-    from subject_sums
+        {{ each_group }}subject_id, unit_number, weight, duration, {{ of_duration }}, r_before, r_after,
+        case when r_before = 0 then 0 else 0 - r_before * (naive_before - last_naive) end as drift,
+        case when at_risk > 0 then (happened * at_risk - r_here * events) / at_risk / at_risk else 0 end as step
+    from subject_turns
+),
+
+subject_scores as (
+    select
+        {{ each_group }}weight, duration, {{ of_duration }}, r_before, r_after, step,
+        drift + coalesce(sum(drift + step) over ({{ subject_before }}), 0) as score
+    from subject_steps
 ),
 
 duration_sums as (
     select
         {{ each_group }}duration,
-        max(is_step) as is_step,
-        max(events) as events,
-        max(at_risk) as at_risk,
-        max(mean_count) as mean_count,
-        max(naive_variance) as naive_variance,
-        sum(weight * a_step * (a + last_a)) as aa_step,
-        sum(weight * abs(a_step * (a + last_a))) as aa_turnover,
-        sum(weight * (a * r - last_a * last_r)) as ar_step,
-        sum(weight * r_step * (r + last_r)) as rr_step
-    from subject_changes
+        {%- for name in of_duration.split(', ') %}
+        max({{ name }}) as {{ name }},
+        {%- endfor %}
+        sum(weight * step * (2 * score + step)) as own_squares,
+        sum(weight * abs(step * (2 * score + step))) as own_turnover,
+        sum(weight * r_before * score) as own_rs,
+        sum(weight * (r_after * (score + step) - r_before * score)) as rs_step,
+        sum(weight * r_before * r_before) as own_rr,
+        sum(weight * (r_after * r_after - r_before * r_before)) as rr_step
+    from subject_scores
     group by {{ each_group }}duration
 ),
 
-running_squares as (
+others_at_risk as (
     select
-        {{ each_group }}duration, is_step, events, at_risk, mean_count, naive_variance,
-        lead(at_risk) over ({{ partition }}order by duration) as next_at_risk,
-        lead(duration) over ({{ partition }}order by duration) as next_duration,
-        sum(aa_step) over ({{ so_far }}) as aa,
-        sum(aa_turnover) over ({{ so_far }}) as size_of_terms,
-        sum(ar_step) over ({{ so_far }}) as ar,
-        sum(rr_step) over ({{ so_far }}) as rr
+        {{ each_group }}duration, {{ of_duration }}, own_squares, own_turnover, own_rs, rs_step,
+        coalesce(sum(rr_step) over ({{ before }}), 0) - own_rr as others_rr
     from duration_sums
+),
+
+others_scores as (
+    select
+        {{ each_group }}duration, {{ of_duration }}, own_squares, own_turnover, others_rr,
+        coalesce(sum(rs_step - naive_step * others_rr) over ({{ before }}), 0) - own_rs as others_rs
+    from others_at_risk
+),
+
+square_steps as (
+    select
+        {{ each_group }}duration, {{ of_duration }},
+        own_squares + naive_step * (naive_step * others_rr - 2 * others_rs) as square_step,
+        own_turnover + naive_step * (naive_step * others_rr + 2 * abs(others_rs)) as turnover
+    from others_scores
 ),
 
 variances as (
     select
-        {{ each_group }}duration, is_step, events, at_risk, mean_count, naive_variance, next_at_risk, next_duration,
-        aa - 2 * naive_variance * ar + naive_variance * naive_variance * rr as robust_variance,
-        size_of_terms
-    from running_squares
+        {{ each_group }}duration, is_step, events, at_risk, mean_count,
+        naive_before + naive_step as naive_variance,
+        lead(at_risk) over ({{ partition }}order by duration) as next_at_risk,
+        lead(duration) over ({{ partition }}order by duration) as next_duration,
+        sum(square_step) over ({{ so_far }}) as robust_variance,
+        sum(turnover) over ({{ so_far }}) as size_of_terms
+    from square_steps
 )
 {%- endmacro %}
