@@ -4,7 +4,8 @@
 
 Each data set has 100 spells in two groups of 50 (``--groups``, ``--of-each``). All spells have the same
 distribution, whole durations with many ties; a third or so are censored, and one in four enters late. One
-query tests all of them (``by='simulation'``), once for each weighting. Prints the table in docs/comparisons.md.
+query tests all of them (``by='simulation'``), once for each weighting. Prints the table that
+docs/comparisons.md has.
 """
 
 from __future__ import annotations
