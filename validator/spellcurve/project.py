@@ -192,6 +192,8 @@ class Project:
         own = [*self._options, *(["--vars", json.dumps(given)] if given else [])]
         with redirect_stdout(StringIO()):
             done = dbtRunner(manifest=self._manifest).invoke([*settings, command, *arguments, *own])
+        if isinstance(done.exception, KeyboardInterrupt):
+            raise done.exception
         if done.exception is not None:
             raise ProjectError(f"dbt {command} could not run: {_one_line(done.exception)}")
         return done.result
