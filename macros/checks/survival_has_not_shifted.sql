@@ -112,13 +112,7 @@
         'unplaced', 'spells_recent', 'spells_baseline', 'events_recent', 'events_baseline', 'survival_recent', 'survival_baseline', 'z',
         'statistic', 'p_value', 'hazard_ratio'
     ] -%}
-with sides as (
-    select 0 as is_recent
-    union all
-    select 1 as is_recent
-),
-
-{% if compare == 'cohorts' -%}
+with {% if compare == 'cohorts' -%}
 parts_placed as (
     select
         {{ spellcurve._columns_as(strata, plain_strata) }}entry, duration, event, weight,
@@ -134,10 +128,20 @@ parts_placed as (
 ),
 
 {% else -%}
+-- a name that no query in here uses: some engines look names up where a CTE is read, not where it is written
+sides_of_cutoff as (
+    select 0 as side
+    union all
+    select 1 as side
+),
+
 -- tenure when the recent period began, and when the baseline did; -1 where the spell had not begun
 spells_placed as (
     select
-        {{ spellcurve._columns_as(strata, plain_strata) }}entry, duration, event, weight, started_at,
+        {{ spellcurve._columns_as(strata, plain_strata) }}weight,
+        entry as given_entry,
+        duration as given_duration,
+        event as given_event,
         {%- for name, moment in [('tenure_then', cutoff_sql), ('tenure_at_first', begin_sql)] %}
         case
             {%- if moment is none %}
@@ -156,18 +160,18 @@ spells_placed as (
 parts_placed as (
     select
         {{ each_stratum }}weight,
-        case when tenure_then is null then -1 else is_recent end as is_recent,
-        case when is_recent = 1 then greatest(entry, tenure_then, 0) else greatest(entry, tenure_at_first, 0) end as entry,
-        case when is_recent = 1 then duration else least(duration, tenure_then) end as duration,
-        case when is_recent = 1 or duration <= tenure_then then event else 0 end as event
+        case when tenure_then is null then -1 else side end as is_recent,
+        case when side = 1 then greatest(given_entry, tenure_then, 0) else greatest(given_entry, tenure_at_first, 0) end as entry,
+        case when side = 1 then given_duration else least(given_duration, tenure_then) end as duration,
+        case when side = 1 or given_duration <= tenure_then then given_event else 0 end as event
     from spells_placed
-    cross join sides
+    cross join sides_of_cutoff
     where
-        (tenure_then is null and is_recent = 0)
-        or (is_recent = 1 and (tenure_then <= 0 or duration > tenure_then))
+        (tenure_then is null and side = 0)
+        or (side = 1 and (tenure_then <= 0 or given_duration > tenure_then))
         or (
-            is_recent = 0 and tenure_then > 0 and entry < tenure_then
-            and (tenure_at_first <= 0 or duration > tenure_at_first)
+            side = 0 and tenure_then > 0 and given_entry < tenure_then
+            and (tenure_at_first <= 0 or given_duration > tenure_at_first)
         )
 ),
 

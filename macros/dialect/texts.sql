@@ -27,3 +27,8 @@
 {% macro clickhouse___text(value) %}
     {{ return(spellcurve._text_with_backslashes(value)) }}
 {% endmacro %}
+
+{# A backslash escapes there as well, though it inherits PostgreSQL's macros. #}
+{% macro redshift___text(value) %}
+    {{ return("'" ~ (value | string).replace("\\", "\\\\").replace("'", "''") ~ "'") }}
+{% endmacro %}
