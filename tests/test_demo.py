@@ -9,6 +9,7 @@ import duckdb
 import pandas as pd
 import pytest
 from lifelines import KaplanMeierFitter
+from lifelines.statistics import multivariate_logrank_test
 from lifelines.utils import median_survival_times, restricted_mean_survival_time
 from spellcurve import __version__, demo, generate, summary
 from spellcurve.cli import app
@@ -108,10 +109,12 @@ def test_seeds_loaded_by_dbt_are_the_generator_s_tables(tmp_path):
 # Figures
 
 
-def test_demo_agrees(small):
+def test_demo_agrees(small, small_result):
     _, printed = small
     assert printed.exit_code == 0, printed.output
-    assert "✓ 9 curves, 15 read-outs and 10 tables of causes, counts and states: " in printed.output
+    assert len(small_result.readouts) >= 17
+    said = f"✓ 9 curves, {len(small_result.readouts)} read-outs and 10 tables of causes, counts and states: "
+    assert said in printed.output
     assert "✗" not in printed.output
 
 
@@ -186,6 +189,50 @@ def check_average(spells: pd.DataFrame, group: summary.GroupFigures) -> None:
     area = restricted_mean_survival_time(fitted, average.horizon)
     assert average.mean == pytest.approx(area, rel=1e-9)
     assert 0 <= average.lower <= average.mean <= average.upper <= average.horizon
+
+
+def test_whether_groups_differ_is_told_and_was_compared(small, small_result):
+    compared = {readout.model: readout.exact for readout in small_result.readouts}
+    printed = " ".join(small[1].output.split())
+    asked = [answer for answer in small_result.answers if answer.question.tests]
+    assert [answer.question.tests for answer in asked] == ["demo_membership_log_rank", "demo_part_log_rank"]
+    for answer in asked:
+        everybody, *pairs = answer.tests
+        assert f"{answer.question.differ} {summary.verdict_in_words(everybody)}" in printed
+        assert pairs and all(summary.pair_in_words(pair) in printed for pair in pairs)
+        assert compared[answer.question.tests].rows == len(answer.tests)
+        assert compared[answer.question.tests].figures == 13 * len(answer.tests)
+    with duckdb.connect(str(small[0] / demo.DATABASE)) as connection:
+        parts = connection.execute(
+            f"select part, duration, event from {demo.SCHEMA}.demo_part_spells where entry = 0"
+        ).df()
+    right = multivariate_logrank_test(parts["duration"], parts["part"], parts["event"])
+    assert asked[1].tests[0]["statistic"] == pytest.approx(right.test_statistic, rel=1e-9)
+
+
+def test_what_is_said_of_tests_of_groups():
+    row = {"weighting": "log-rank", "statistic": 16.79, "p_value": 0.0312, "status": "compared"}
+    assert summary.verdict_in_words(row) == "yes (log-rank 16.8, p = 0.031)"
+    assert summary.verdict_in_words(row | {"p_value": 0.06}) == "not shown (log-rank 16.8, p = 0.060)"
+    nothing = {"weighting": "gehan", "statistic": None, "p_value": None, "status": "no_events"}
+    assert summary.verdict_in_words(nothing) == "cannot be told (no events)"
+    pair = {"group_a": "household", "group_b": "individual", "p_value_adjusted": 1e-9, "status": "compared"}
+    limits = {"hazard_ratio": 0.651, "hazard_ratio_lower": 0.6, "hazard_ratio_upper": 0.71}
+    told = "household at 0.65 times the rate of individual (0.60 to 0.71), p < 0.001"
+    assert summary.pair_in_words(pair | limits) == told
+    far = pair | limits | {"hazard_ratio": 0.2}
+    assert summary.pair_in_words(far) == "household at less than a third of the rate of individual, p < 0.001"
+    far = pair | limits | {"hazard_ratio": 3.5}
+    assert summary.pair_in_words(far) == "household at more than 3 times the rate of individual, p < 0.001"
+    none = pair | {"hazard_ratio": None, "p_value_adjusted": None, "status": "no_events"}
+    assert summary.pair_in_words(none) == "household and individual: no events"
+
+
+def test_a_wrong_test_of_groups_is_caught(copied):
+    spoil(copied, "update demo_membership_log_rank set hazard_ratio = 1.5 where group_a is not null")
+    printed = run("demo", "--folder", copied, "--check-only")
+    assert printed.exit_code == 1
+    assert "demo_membership_log_rank: 1 figures or rows disagree" in printed.output
 
 
 def test_every_read_out_that_is_printed_was_compared(small, small_result):
@@ -438,7 +485,7 @@ def test_a_wrong_read_out_is_printed_as_it_stands_and_gives_exit_status_1(copied
     printed = run("demo", "--folder", copied, "--check-only")
     assert printed.exit_code == 1
     assert all(words in printed.output for words in ("12.3% (", "12 (3 to ", "4,321 ("))
-    assert "✗ 9 curves, 15 read-outs and 10 tables" in printed.output
+    assert "✗ 9 curves, " in printed.output and " read-outs and 10 tables" in printed.output
     assert "demo_membership_shares: 1 figures or rows disagree" in printed.output
     assert "survival at duration 90 is 0.123, but" in " ".join(printed.output.split())
 

@@ -34,11 +34,13 @@ from spellcurve.summary import (
     faults_in_words,
     half_in_words,
     incidence_in_words,
+    pair_in_words,
     ratio_in_words,
     share_at,
     share_in_words,
     states_in_words,
     status_in_words,
+    verdict_in_words,
 )
 
 if TYPE_CHECKING:
@@ -194,6 +196,11 @@ def _print_answer(out: Console, answer: Answer) -> None:
         *(average_in_words(group.average) for group in answer.groups),
     )
     _print_section(out, question.title, question.note, table)
+    for row in answer.tests:
+        if row["group_a"] is None:
+            out.print(f"  {question.differ} {verdict_in_words(row)}")
+        else:
+            out.print(f"    {pair_in_words(row)}")
 
 
 def _print_section(out: Console, title: str, note: str, table: Table) -> None:

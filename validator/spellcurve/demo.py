@@ -15,7 +15,7 @@ from typing import Any
 import duckdb
 from dbt.cli.main import dbtRunner
 
-from spellcurve import compare_ends, compare_readouts, generate
+from spellcurve import compare_ends, compare_groups, compare_readouts, generate
 from spellcurve.compare import Comparison, compare_curves
 from spellcurve.exact import CurveRow, Spell, group_spells, survival_curves
 from spellcurve.independent import independent_curves
@@ -58,7 +58,10 @@ class Reading:
 
 @dataclass(frozen=True)
 class Question:
-    """One thing the summary tells: read-outs, their spells, durations to tell of, horizon of the average."""
+    """One thing the summary tells: read-outs, their spells, durations to tell of, horizon of the average.
+
+    `differ` asks whether its groups differ, which the table `tests` answers, if there is one.
+    """
 
     title: str
     note: str
@@ -69,6 +72,8 @@ class Question:
     spells: str
     durations: tuple[int, ...]
     horizon: int
+    differ: str = ""
+    tests: str | None = None
 
 
 QUESTIONS = (
@@ -99,6 +104,8 @@ QUESTIONS = (
         "demo_membership_spells",
         (30, 90, 365),
         365,
+        "Do members of the two plans leave at different rates?",
+        "demo_membership_log_rank",
     ),
     Question(
         "How soon do they borrow their first tool?",
@@ -133,6 +140,8 @@ QUESTIONS = (
         "demo_part_spells",
         (100, 500, 1_000),
         1_000,
+        "Do parts wear out at different rates?",
+        "demo_part_log_rank",
     ),
 )
 
@@ -156,10 +165,11 @@ SOURCES: dict[str, tuple[str, ...]] = {
 
 @dataclass(frozen=True)
 class Answer:
-    """A question and the figures of its groups, everybody first."""
+    """A question, the figures of its groups, everybody first, and rows of their test, all groups first."""
 
     question: Question
     groups: tuple[GroupFigures, ...]
+    tests: tuple[dict[str, Any], ...] = ()
 
 
 @dataclass(frozen=True)
@@ -492,7 +502,9 @@ class _Demo:
         with self._connect() as connection:
             return tuple(
                 _check_readout(connection, model, provenance, self.exact_curves)
-                for model, provenance in self._compiled_calls(compare_readouts.KEYS).items()
+                for model, provenance in self._compiled_calls(
+                    (*compare_readouts.KEYS, *compare_groups.OF_CURVES, "log_rank_test")
+                ).items()
             )
 
     def check_ends(self) -> tuple[CheckedReadout, ...]:
@@ -578,7 +590,7 @@ def _spells(
     connection: duckdb.DuckDBPyConnection, provenance: Provenance
 ) -> dict[tuple[Any, ...], list[Spell]]:
     """The spells that a model reads, as aggregated by the database; a cohort comes first in its groups."""
-    by = provenance.by
+    by = compare_groups.columns(provenance)
     expressions = _quoted(by)
     if cohort := provenance.options.get("cohort"):
         period, column = provenance.options["period"], _quoted([cohort])[0]
@@ -616,12 +628,25 @@ def _check_readout(
     curves: Mapping[str, Mapping[tuple[Any, ...], Sequence[CurveRow]]],
 ) -> CheckedReadout:
     macro, options, by = provenance.macro, provenance.options, provenance.by
+    published = _rows(connection, f"select * from {_table(model)}")
+    if macro in compare_groups.KEYS:
+        if macro in compare_groups.OF_CURVES:
+            expected = compare_groups.of_curves(provenance, curves[_bare(options["curve"])], str)
+        else:
+            every = [spell for own in _spells(connection, provenance).values() for spell in own]
+            expected = compare_groups.of_spells(provenance, every, str)
+        names = (*by, *compare_groups.KEYS[macro])
+        return CheckedReadout(
+            model,
+            compare_readouts.compare_readouts(
+                published, expected, names, differences=compare_groups.DIFFERENCES
+            ),
+        )
     if macro in compare_readouts.OF_CURVES:
         expected = compare_readouts.of_curves(macro, curves[_bare(options["curve"])], options)
     else:
         expected = compare_readouts.of_spells(macro, _spells(connection, provenance), options)
         by = ("cohort", *by) if macro == "cohort_readout" else by
-    published = _rows(connection, f"select * from {_table(model)}")
     names = (*by, *compare_readouts.KEYS[macro])
     return CheckedReadout(model, compare_readouts.compare_readouts(published, expected, names))
 
@@ -677,7 +702,12 @@ def _answer(connection: duckdb.DuckDBPyConnection, question: Question) -> Answer
                     average_within(_of(own, means), question.horizon),
                 )
             )
-    return Answer(question, tuple(groups))
+    tests = (
+        _rows(connection, f"select * from {_table(question.tests)} order by group_a nulls first, group_b")
+        if question.tests
+        else []
+    )
+    return Answer(question, tuple(groups), tuple(tests))
 
 
 def _ends(connection: duckdb.DuckDBPyConnection) -> Ends:

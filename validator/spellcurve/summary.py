@@ -246,6 +246,32 @@ def chance_in_words(p_value: float | None, status: str) -> str:
     return "p < 0.001" if p_value < 0.001 else f"p = {p_value:.3f}"
 
 
+def verdict_in_words(row: Mapping[str, Any]) -> str:
+    """A test of groups at 5%: for instance 'yes (log-rank 95.4, p < 0.001)'; 'not shown' is not 'no'."""
+    p_value, status = row["p_value"], row["status"]
+    if p_value is None:
+        return f"cannot be told ({status_in_words(status)})"
+    shown = "yes" if p_value < 0.05 else "not shown"
+    return f"{shown} ({row['weighting']} {row['statistic']:,.1f}, {chance_in_words(p_value, status)})"
+
+
+def pair_in_words(row: Mapping[str, Any]) -> str:
+    """For instance 'household at 0.65 times the rate of individual (0.60 to 0.71), p < 0.001'.
+
+    A one-step hazard ratio far from 1 is only told as a direction.
+    """
+    one, other, ratio = row["group_a"], row["group_b"], row["hazard_ratio"]
+    chance = chance_in_words(row["p_value_adjusted"], row["status"])
+    if ratio is None:
+        return f"{one} and {other}: {chance}"
+    if ratio < 1 / 3:
+        return f"{one} at less than a third of the rate of {other}, {chance}"
+    if ratio > 3:
+        return f"{one} at more than 3 times the rate of {other}, {chance}"
+    lower, upper = row["hazard_ratio_lower"], row["hazard_ratio_upper"]
+    return f"{one} at {ratio:.2f} times the rate of {other} ({lower:.2f} to {upper:.2f}), {chance}"
+
+
 def status_in_words(status: str) -> str:
     """What a read-out's status means, for somebody who has not read the documentation."""
     return STATUS_IN_WORDS.get(status, status.replace("_", " "))
