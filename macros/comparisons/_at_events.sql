@@ -83,7 +83,10 @@
 
 numbers as (
     {%- for number in range(1, most_groups + 1) %}
-    select {{ number }} as number{{ ' union all' if not loop.last }}
+    select {{ number }} as number
+    {%- if not loop.last %}
+    union all
+    {%- endif %}
     {%- endfor %}
 ),
 

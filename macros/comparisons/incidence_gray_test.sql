@@ -32,7 +32,10 @@ with {{ spellcurve._cause_risk_sets(spells, compared.columns, none, 'fractional'
 
 numbers as (
     {%- for number in range(1, most_groups + 1) %}
-    select {{ number }} as number{{ ' union all' if not loop.last }}
+    select {{ number }} as number
+    {%- if not loop.last %}
+    union all
+    {%- endif %}
     {%- endfor %}
 ),
 
@@ -288,7 +291,10 @@ covariances as (
 
 places as (
     {%- for place in range(1, 6) %}
-    select {{ place }} as place{{ ' union all' if not loop.last }}
+    select {{ place }} as place
+    {%- if not loop.last %}
+    union all
+    {%- endif %}
     {%- endfor %}
 ),
 

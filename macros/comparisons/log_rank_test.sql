@@ -149,7 +149,10 @@ sums_with_total as (
 
 places as (
     {%- for place in range(1, 7) %}
-    select {{ place }} as place{{ ' union all' if not loop.last }}
+    select {{ place }} as place
+    {%- if not loop.last %}
+    union all
+    {%- endif %}
     {%- endfor %}
 ),
 

@@ -446,6 +446,7 @@ products_{{ step }} as (
         {%- endfor %}
     from earlier_{{ step }}
 ),
+{# a blank line between CTEs #}
         {%- set doubling.reach = doubling.reach * 2 -%}
         {%- set doubling.source = 'products_' ~ step %}
     {%- endfor %}

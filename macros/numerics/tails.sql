@@ -33,10 +33,7 @@
             {%- if freedom == 1 %}
             {{ spellcurve._scaled_erfc(prefix ~ '_root') }}
             {%- else %}
-            case
-                when {{ prefix }}_is_odd = 0 then 0
-                else {{ spellcurve._scaled_erfc(prefix ~ '_root') }}
-            end
+            {{ prefix }}_is_odd * ({{ spellcurve._scaled_erfc(prefix ~ '_root') }})
             {%- if most > 1 %}
             + case
                 when {{ prefix }}_is_odd = 0 then 1
