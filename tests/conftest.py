@@ -4,6 +4,7 @@ import os
 from collections.abc import Iterator
 
 import pytest
+from defects import CAUGHT
 from harness import ENGINES, DuckDB, Engine
 from hypothesis import HealthCheck, settings
 
@@ -67,3 +68,7 @@ def spark(started, tmp_path_factory) -> Engine:
 def pytest_terminal_summary(terminalreporter) -> None:
     for name, why in NOT_RUN.items():
         terminalreporter.write_line(f"ENGINE NOT RUN: {name} ({why})", yellow=True, bold=True)
+    if CAUGHT:
+        terminalreporter.write_line(
+            f"SEEDED DEFECTS: {sum(CAUGHT.values())} of {len(CAUGHT)} caught", bold=True
+        )
