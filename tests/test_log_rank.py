@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import csv
+import sys
 from collections.abc import Iterable, Sequence
 from fractions import Fraction
 from pathlib import Path
@@ -20,6 +21,10 @@ from scipy.stats import chi2, false_discovery_control, norm
 from spellcurve import exact_comparisons
 from spellcurve.exact import Spell
 from strategies import GROUPS
+
+sys.path.insert(0, str(Path(__file__).resolve().parents[1] / "benchmarks"))
+
+import null_size
 
 TOLERANCE = 1e-10
 DATA = Path(__file__).parent / "data"
@@ -613,6 +618,27 @@ def test_a_long_course_of_a_thousand_million_spells(engine):
         [row] = engine.run(call(weighting=weighting, most_groups=5))
         [right] = exact_comparisons.log_rank_test(spells_of(rows), weighting, digits=60)
         assert close(row["statistic"], right.statistic, 1e-9), (row, float(right.statistic))
+
+
+# Size under the null
+
+
+@pytest.mark.parametrize(
+    "weighting", ["log-rank", "gehan", "tarone-ware", "peto", "fleming-harrington(1, 0)"]
+)
+def test_one_in_twenty_is_rejected_where_nothing_differs(engine, weighting):
+    """500 data sets in one query; benchmarks/null_size.py does so with 2,000, for docs/comparisons.md.
+
+    25 are expected, and 25 ± 15 is three times the sampling error. Of groups that differ many more are.
+    """
+    spells = null_size.simulated(500, groups=2, of_each=50, seed=20)
+    null_size.load(engine, spells)
+    tested, rejected = null_size.rejections(engine, weighting, groups=2)
+    assert tested == 500 and 10 <= rejected <= 40
+    slower = spells["plan"] == 1
+    spells["duration"] = spells["duration"] * np.where(slower, 2, 1)
+    null_size.load(engine, spells)
+    assert null_size.rejections(engine, weighting, groups=2)[1] > 250
 
 
 # Wrong calls
