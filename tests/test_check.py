@@ -109,10 +109,10 @@ def test_a_project_whose_figures_are_right_passes(consumer, tmp_path):
         consumer, "--junit", str(tmp_path / "a" / "j.xml"), "--json", str(tmp_path / "c.json")
     )
     assert status == 0, said
-    assert "6 models on duckdb" in said and "6 agrees" in said
+    assert "7 models on duckdb" in said and "7 agrees" in said
     assert table_states(consumer) == before
     suite = xml.parse(tmp_path / "a" / "j.xml").getroot()
-    assert (suite.get("tests"), suite.get("failures"), suite.get("errors")) == ("6", "0", "0")
+    assert (suite.get("tests"), suite.get("failures"), suite.get("errors")) == ("7", "0", "0")
     content = json.loads((tmp_path / "c.json").read_text())
     assert content["exit_status"] == 0 and {call["verdict"] for call in content["calls"]} == {AGREES}
     by_model = {call["model"]: call for call in content["calls"]}

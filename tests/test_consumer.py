@@ -122,6 +122,7 @@ def test_the_database_holds_the_users_own_tables_alone(built: Consumer) -> None:
             "select table_schema, table_name, table_type from information_schema.tables"
         ).fetchall()
     assert sorted(made) == [
+        ("analytics", "lapse_causes", "BASE TABLE"),
         ("analytics", "machine_curve", "VIEW"),
         ("analytics", "membership_curve", "BASE TABLE"),
         ("analytics", "membership_faults", "BASE TABLE"),
@@ -214,6 +215,16 @@ def test_the_membership_curve_agrees_with_the_reference_estimator(built: Consume
         at_risk = [((of["entry"] < t) & (t <= of["duration"])).sum() if t else (of["entry"] == 0).sum()
                    for t in part["duration"]]
         assert part["at_risk"].tolist() == at_risk
+
+
+def test_the_causes_and_the_curve_add_up(built: Consumer) -> None:
+    causes, curve = built.table("lapse_causes"), built.table("membership_curve")
+    ended = built.table("membership_spells").query("event == 1 and duration > entry")
+    assert causes.groupby("cause")["events"].sum().to_dict() == ended["cause"].value_counts().to_dict()
+    together = causes.groupby(["plan", "duration"], dropna=False, as_index=False)["incidence"].sum()
+    both = together.merge(curve, on=["plan", "duration"])
+    assert len(both) == len(together) == len(curve) > 50
+    np.testing.assert_allclose(both["incidence"] + both["survival"], 1, rtol=1e-9)
 
 
 def test_a_curve_of_a_cte_reads_only_its_rows(built: Consumer) -> None:

@@ -1,0 +1,1 @@
+{{ spellcurve.cumulative_incidence(ref('membership_spells'), by=['plan']) }}
