@@ -11,7 +11,7 @@ import pytest
 from lifelines import KaplanMeierFitter
 from lifelines.statistics import multivariate_logrank_test
 from lifelines.utils import median_survival_times, restricted_mean_survival_time
-from spellcurve import __version__, demo, generate, summary
+from spellcurve import __version__, demo, generate, package, summary
 from spellcurve.cli import app
 from typer.testing import CliRunner
 
@@ -531,8 +531,7 @@ def test_models_that_fail_give_exit_status_2(tmp_path, monkeypatch):
         shutil.copytree(SEEDS.parents[1] / name, project / name)
     shutil.copy(SEEDS.parents[1] / "dbt_project.yml", project)
     (project / "models" / "demo" / "staging" / "demo_joiners.sql").write_text("select nonsense")
-    monkeypatch.setattr(demo, "__file__", str(tmp_path / "demo.py"))
-    assert demo.find_project() == project
+    monkeypatch.setattr(package, "__file__", str(tmp_path / "package.py"))
     printed = run("demo", "--folder", tmp_path / "demo", *SMALL)
     assert printed.exit_code == 2
     assert "Could not run: dbt run failed at demo_joiners" in printed.output
@@ -541,11 +540,11 @@ def test_models_that_fail_give_exit_status_2(tmp_path, monkeypatch):
 # Words
 
 
-def test_project_is_found_in_the_checkout_or_reported_missing(tmp_path, monkeypatch):
-    assert demo.find_project() == SEEDS.parents[1]
-    monkeypatch.setattr(demo, "__file__", str(tmp_path / "a" / "b" / "demo.py"))
-    with pytest.raises(demo.DemoError, match="There is no dbt_project"):
-        demo.find_project()
+def test_a_package_that_is_not_there_gives_exit_status_2(tmp_path, monkeypatch):
+    monkeypatch.setattr(package, "__file__", str(tmp_path / "a" / "b" / "package.py"))
+    printed = run("demo", "--folder", tmp_path / "demo")
+    assert printed.exit_code == 2
+    assert "Could not run: There is no dbt_project" in printed.output
 
 
 def test_help_mentions_every_option():

@@ -19,6 +19,7 @@ from spellcurve import compare_ends, compare_groups, compare_readouts, generate
 from spellcurve.compare import Comparison, compare_curves
 from spellcurve.exact import CurveRow, Spell, group_spells, survival_curves
 from spellcurve.independent import independent_curves
+from spellcurve.package import find_package
 from spellcurve.provenance import Provenance, first_provenance
 from spellcurve.summary import GroupFigures, average_within, share_at, time_to_half
 
@@ -331,22 +332,6 @@ def run_demo(
         return demo.result(checked, readouts, ends, tests)
 
 
-def find_project() -> Path:
-    """The folder of the package's dbt project: beside this module in a wheel, else the checkout's root.
-
-    Raises:
-        DemoError: there is no dbt_project.yml in either place.
-    """
-    here = Path(__file__).resolve()
-    for folder in (here.parent / "dbt_package", here.parents[2]):
-        if (folder / "dbt_project.yml").is_file():
-            return folder
-    raise DemoError(
-        f"There is no dbt_project.yml in {here.parent / 'dbt_package'} or {here.parents[2]}; "
-        "install the spellcurve package again."
-    )
-
-
 @contextmanager
 def _own_settings_only() -> Iterator[None]:
     """Keeps the user's settings of dbt (environment variables such as DBT_WARN_ERROR) out of the demo."""
@@ -364,7 +349,10 @@ class _Demo:
         self.folder = folder
         self.database = folder / DATABASE
         self.compiled = folder / "target" / "compiled" / "spellcurve" / "models" / "demo"
-        self.project = find_project()
+        try:
+            self.project = find_package()
+        except FileNotFoundError as error:
+            raise DemoError(str(error)) from error
         self.exact_curves: dict[str, dict[tuple[Any, ...], list[CurveRow]]] = {}
 
     def prepare(self) -> None:
