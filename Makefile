@@ -52,7 +52,7 @@ lint: $(READY_TO_TEST) ## Check the Python code with ruff and mypy, and the comp
 	rm -rf $(COMPILED)
 	$(BIN)/dbt --quiet compile --no-introspect --no-populate-cache --profiles-dir .ci --target-path $(COMPILED) \
 	    --vars '{spellcurve_demo: true}' --exclude resource_type:test
-	$(BIN)/sqlfluff lint --disable-progress-bar $(COMPILED)/compiled
+	$(BIN)/sqlfluff lint --disable-progress-bar --processes 0 $(COMPILED)/compiled
 
 portability: $(READY_FOR_OTHERS) ## Compile for seven more warehouses and compare their figures
 	$(OTHER)/bin/python -m pytest tests/portability $(PYTEST_ARGS)

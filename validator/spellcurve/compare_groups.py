@@ -35,7 +35,7 @@ OF_CURVES = ("difference_at", "difference_in_restricted_mean")
 DIFFERENCES = ("statistic", "z", "difference", "difference_lower", "difference_upper")
 
 #: With more durations than this, products keep ``_DIGITS`` digits instead of all.
-_LONG, _DIGITS = 250, 80
+_LONG, _DIGITS = 40, 80
 
 
 def columns(provenance: Provenance) -> tuple[str, ...]:
