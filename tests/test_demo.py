@@ -455,7 +455,7 @@ SPOILT = {
         "hazard at plan household, cause unused, duration "
     ),
     "update demo_lapse_causes_stacked set share_from = 0.5 where part = 'still a member'": (
-        "share_from at plan household, duration 0, part still a member is 0.5, but 0 is expected."
+        "share_from at plan household, duration 0, part still a member is 0.5, but "
     ),
     "update demo_lapse_causes_gray set p_value = 0.5 where ending = 'cost'": (
         "p_value at ending cost is 0.5, but"

@@ -55,7 +55,7 @@ DIFFERENCES = (
 )
 
 DIGITS = 80
-_SHORT = 30
+_SHORT = 40
 _PRECISION = 60
 
 Row = dict[str, Any]
