@@ -69,17 +69,20 @@ class KeptDuckDB(DuckDB):
 
 
 class ParsedProject(Project):
-    """A project whose manifest is given, so that nothing is parsed again."""
+    """A project whose manifest is given, so that nothing is parsed again; `built` is what dbt built last of it."""
 
     def __init__(self, manifest: Any, *arguments: Any, **options: Any) -> None:
         super().__init__(*arguments, **options)
         self._manifest = manifest
+        self.built: Any = None
 
     def dbt(self, command: str, *arguments: str, variables: Mapping[str, Any] | None = None) -> Any:
         if command == "parse":
             return self._manifest
-        if command == "compile":  # the manifest is at hand, and writing it takes most of the time
-            arguments = ("--no-write-json", *arguments)
+        if command == "compile":
+            if self.built is not None:  # it was compiled to be built
+                return self.built
+            arguments = ("--no-write-json", *arguments)  # writing the manifest takes most of the time
         return super().dbt(command, *arguments, variables=variables)
 
 
@@ -134,7 +137,7 @@ class Proof:
         return {name for name in found if name.startswith("macro.")}
 
     def build(
-        self, project: Project, models: Sequence[str], variables: Mapping[str, Any] | None = None
+        self, project: ParsedProject, models: Sequence[str], variables: Mapping[str, Any] | None = None
     ) -> None:
         """Build models and what they read.
 
@@ -142,9 +145,11 @@ class Proof:
             BuildError: the warehouse refused one.
         """
         choice = [part for name in models for part in ("--select", f"+{name}")]
-        for result in project.dbt("run", "--no-write-json", *choice, variables=variables).results:
+        done = project.dbt("run", "--no-write-json", "--no-populate-cache", *choice, variables=variables)
+        for result in done.results:
             if result.status != "success":
                 raise BuildError(f"{result.node.name}: {result.message}")
+        project.built = None if variables else done
 
     def check(self, project: Project, models: Sequence[str]) -> list[CheckedCall]:
         """What `spellcurve check` says of models."""
