@@ -44,7 +44,7 @@ demo: $(READY) ## Build the tool library's figures on DuckDB and show them
 test: lint pytest ## Lint, then run every test on DuckDB, PostgreSQL and Spark
 
 pytest: $(READY_TO_TEST)
-	$(BIN)/python -m pytest --numprocesses auto --maxprocesses 4 --dist loadgroup $(PYTEST_ARGS)
+	$(BIN)/python -m pytest --numprocesses auto --maxprocesses 4 --dist loadfile $(PYTEST_ARGS)
 
 lint: $(READY_TO_TEST) ## Check the Python code with ruff and mypy, and the compiled SQL with sqlfluff
 	$(BIN)/ruff check .

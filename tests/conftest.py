@@ -65,16 +65,6 @@ def spark(started, tmp_path_factory) -> Engine:
     return _start("spark", started, tmp_path_factory)
 
 
-@pytest.hookimpl(tryfirst=True)
-def pytest_collection_modifyitems(config, items) -> None:
-    """Keep each module in one process, and Spark in one of its own: it is started once for the whole run."""
-    if config.pluginmanager.hasplugin("xdist"):
-        for item in items:
-            chosen = getattr(item, "callspec", None)
-            on_spark = "spark" in item.fixturenames or (chosen and "spark" in chosen.params.values())
-            item.add_marker(pytest.mark.xdist_group("spark" if on_spark else item.path.stem))
-
-
 def pytest_sessionfinish(session) -> None:
     """Where tests run in several processes, each tells what it found to the one that writes the summary."""
     if hasattr(session.config, "workeroutput"):

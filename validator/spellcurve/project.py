@@ -220,7 +220,7 @@ class Project:
         for unique_id in wanted:
             needed |= {one for one in _ancestors(manifest, unique_id) if self._is_read(one, callers)}
         names = [f"fqn:{'.'.join(manifest.nodes[unique_id].fqn)}" for unique_id in sorted(needed)]
-        compiled = self.dbt("compile", "--select", *names)
+        compiled = self.dbt("compile", "--no-write-json", "--select", *names)
         self._compiled = {}
         for result in compiled.results:
             node = result.node
