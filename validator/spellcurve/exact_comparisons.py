@@ -35,6 +35,7 @@ TOO_MANY_GROUPS, REFERENCE_NOT_FOUND = "too_many_groups", "reference_not_found"
 ALL_GROUPS = "all groups"
 _DIGITS = 60
 _LARGEST_LOG = 700
+_SMALLEST_TAIL = 1e-307
 
 
 @dataclass(frozen=True)
@@ -302,8 +303,14 @@ def _judged(row: ComparedRow, sums: Sums) -> ComparedRow:
         status=COMPARED if rank == full else FEWER_DEGREES,
         statistic=statistic,
         degrees_of_freedom=rank,
-        p_value=float(chi2.sf(float(statistic), rank)),
+        p_value=upper_tail(float(statistic), rank),
     )
+
+
+def upper_tail(statistic: float, degrees_of_freedom: int) -> float:
+    """Return the upper tail of chi-square; 0 below 1e-307, as the warehouse has it."""
+    tail = float(chi2.sf(statistic, degrees_of_freedom))
+    return tail if tail >= _SMALLEST_TAIL else 0.0
 
 
 def _pair(
