@@ -21,6 +21,7 @@
     {%- set caller_name = 'incidence_log_rank_test' -%}
     {%- set causes = spellcurve._checked_causes(caller_name, causes) -%}
     {%- set compared = spellcurve._compared(caller_name, between, strata, by, spellcurve._log_rank_test_columns()) -%}
+    {%- set most_groups = spellcurve._most_groups() if most_groups is none else most_groups -%}
     {%- set columns = [] -%}
     {%- for name in compared.columns -%}{%- do columns.append(spellcurve._column(name)) -%}{%- endfor -%}
     {%- set of_causes -%}

@@ -13,13 +13,12 @@ from dataclasses import dataclass, field, replace
 from decimal import Context, localcontext
 from fractions import Fraction
 from pathlib import Path
-from types import MappingProxyType
 from typing import Any
 
 from spellcurve import compare_ends, compare_groups, compare_readouts, exact, exact_readouts, rebuild
 from spellcurve.compare import TOLERANCE, Comparison, compare_curves
 from spellcurve.compare_spells import as_moment, compare_rows, local
-from spellcurve.exact import BOUNDS, FIGURES, CurveRow, Spell
+from spellcurve.exact import BOUNDS, CURVE_OPTIONS, FIGURES, CurveRow, Spell
 from spellcurve.independent import independent_curves
 from spellcurve.project import Call, Model, Project, ProjectError, Rows, WarehouseError
 from spellcurve.provenance import Provenance
@@ -320,26 +319,21 @@ class _Checker:
         options = _given(call, CURVE_OPTIONS)
         curves = self._exact_curves(call, spells)
         independent = independent_curves(spells, **options)
+        has_bands = bool(call.provenance.options.get("simultaneous"))
 
         def compare(rows: Rows) -> tuple[Comparison, ...]:
-            if bands := call.provenance.options.get("simultaneous"):
-                del bands
-                columns = tuple(name for name in FIGURES if name not in BOUNDS)
-                banded = max(self.tolerance, BAND_TOLERANCE)
-                found = [
-                    compare_curves(rows, curves, by, self.tolerance, columns),
-                    compare_curves(rows, curves, by, banded, BOUNDS),
-                ]
-            else:
-                found = [compare_curves(rows, curves, by, self.tolerance)]
+            pointwise: tuple[str, ...] = FIGURES
+            if has_bands:
+                pointwise = tuple(name for name in FIGURES if name not in BOUNDS)
+            found = [compare_curves(rows, curves, by, self.tolerance, pointwise)]
+            if has_bands:
+                found.append(compare_curves(rows, curves, by, max(self.tolerance, BAND_TOLERANCE), BOUNDS))
             rows_of: dict[Group, Rows] = {}
             for row in rows:
                 if all(name in row for name in by):
                     rows_of.setdefault(tuple(row[name] for name in by), []).append(row)
             for group, curve in independent.items():
-                columns = curve.columns
-                if call.provenance.options.get("simultaneous"):
-                    columns = tuple(name for name in columns if name not in BOUNDS)
+                columns = tuple(name for name in curve.columns if name in pointwise)
                 published = rows_of.get(group, [])
                 found.append(compare_curves(published, {group: curve.rows}, by, self.tolerance, columns))
             return tuple(found)
@@ -427,8 +421,7 @@ class _Checker:
 
             return Expected(compare)
         names = compare_ends.names(provenance)
-        roots = {"std_error": "mean_count"} if provenance.macro == "mean_cumulative_count" else {}
-        return self._table(ends.table(provenance), names, "", compare_ends.DIFFERENCES, roots)
+        return self._table(ends.table(provenance), names, differences=compare_ends.DIFFERENCES)
 
     def _of_groups(self, call: Call) -> Expected:
         provenance, note = call.provenance, ""
@@ -500,10 +493,9 @@ class _Checker:
         names: Sequence[str],
         note: str = "",
         differences: Collection[str] = compare_readouts.DIFFERENCES,
-        roots: Mapping[str, str] = MappingProxyType({}),
     ) -> Expected:
         def compare(rows: Rows) -> tuple[Comparison, ...]:
-            found = compare_readouts.compare_readouts(rows, table, names, self.tolerance, differences, roots)
+            found = compare_readouts.compare_readouts(rows, table, names, self.tolerance, differences)
             return (found,)
 
         return Expected(compare, note=note)
@@ -672,15 +664,6 @@ class _Checker:
         ]
 
 
-CURVE_OPTIONS = (
-    "confidence",
-    "interval_scale",
-    "horizon",
-    "grid",
-    "minimum_at_risk",
-    "small_counts",
-    "weights",
-)
 #: The builders, and the names of what they read.
 BUILDERS = {
     "spells_from_intervals": ("relation",),

@@ -322,7 +322,8 @@ class Recomputed:
                 options["reference"],
                 options["adjustment"],
                 options["confidence"],
-                options["most_groups"] or 50,
+                options["most_groups"],
+                digits=_digits(len({spell.duration for spell in own if spell.event})),
             ):
                 rows.append(segment | vars(found))
         return rows

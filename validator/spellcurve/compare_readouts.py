@@ -10,7 +10,6 @@ import math
 from collections.abc import Collection, Iterable, Mapping, Sequence
 from decimal import Decimal
 from fractions import Fraction
-from types import MappingProxyType
 from typing import Any
 
 from spellcurve import exact_readouts
@@ -141,7 +140,6 @@ def compare_readouts(
     names: Sequence[str],
     tolerance: float = TOLERANCE,
     differences: Collection[str] = DIFFERENCES,
-    roots: Mapping[str, str] = MappingProxyType({}),
 ) -> Comparison:
     """Compare a published read-out with the expected one, status included.
 
@@ -151,7 +149,6 @@ def compare_readouts(
         names: the group columns, then the macro's ``KEYS``.
         tolerance: largest relative difference that still counts as agreement.
         differences: columns that may also be off by a rounding of larger numbers.
-        roots: columns that are roots of such differences, to the column whose square those numbers are like.
     """
     found = Comparison()
     published: dict[Group, Mapping[str, Any]] = {}
@@ -169,8 +166,6 @@ def compare_readouts(
         for column, right in figures.items():
             found.figures += 1
             allowance = _ALLOWANCE if column in differences else 0.0
-            if column in roots and right:
-                allowance = _ALLOWANCE * float(figures[roots[column]] or 0) ** 2 / float(right)
             _compare(found, names, key, column, right, match.get(column), tolerance, allowance)
     for key in published:
         _wrong(found, "extra row", names, key, "should not be in the table")

@@ -17,7 +17,7 @@ from dbt.cli.main import dbtRunner
 
 from spellcurve import compare_ends, compare_groups, compare_readouts, generate
 from spellcurve.compare import Comparison, compare_curves
-from spellcurve.exact import CurveRow, Spell, group_spells, survival_curves
+from spellcurve.exact import CURVE_OPTIONS, CurveRow, Spell, group_spells, survival_curves
 from spellcurve.independent import independent_curves
 from spellcurve.package import find_package
 from spellcurve.provenance import Provenance, first_provenance
@@ -28,16 +28,6 @@ SCHEMA = "harrow_lane"
 GRACE_DAYS = 30
 
 _MARK = "# Written by `spellcurve demo`; built again with every run."
-_CURVE_OPTIONS = (
-    "confidence",
-    "interval_scale",
-    "horizon",
-    "grid",
-    "minimum_at_risk",
-    "small_counts",
-    "weights",
-)
-
 Step = Callable[[str], AbstractContextManager[Any]]
 Rows = list[dict[str, Any]]
 
@@ -476,7 +466,7 @@ class _Demo:
         with self._connect() as connection:
             for model, provenance in self._compiled_curves().items():
                 options = {
-                    name: provenance.options[name] for name in _CURVE_OPTIONS if name in provenance.options
+                    name: provenance.options[name] for name in CURVE_OPTIONS if name in provenance.options
                 }
                 spells = _spells(connection, provenance)
                 self.exact_curves[model] = survival_curves(spells, **options)

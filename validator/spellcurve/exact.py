@@ -25,6 +25,16 @@ INTERVAL_SCALES = ("linear", "log", "log-log", "logit", "arcsine")
 GRIDS = ("steps", "every")
 SMALL_COUNTS = ("keep", "hide")
 WEIGHTS = ("whole", "fractional")
+#: The options of a curve, as ``survival_curve`` takes them and a provenance line has them.
+CURVE_OPTIONS = (
+    "confidence",
+    "interval_scale",
+    "horizon",
+    "grid",
+    "minimum_at_risk",
+    "small_counts",
+    "weights",
+)
 
 _DIGITS = 60
 _BITS = 256  # kept of each half of a fraction on its way to a Decimal: more than 60 digits

@@ -15,22 +15,13 @@ from spellcurve.compare import TOLERANCE, Comparison, compare_curves
 from spellcurve.compare_readouts import Table
 from spellcurve.compare_readouts import compare_readouts as compare_tables
 from spellcurve.compare_spells import compare_rows
-from spellcurve.exact import CurveRow, Spell, group_spells, normal_quantile, survival_curves
+from spellcurve.exact import CURVE_OPTIONS, CurveRow, Spell, group_spells, normal_quantile, survival_curves
 from spellcurve.package import read_reference
 from spellcurve.provenance import Provenance
 
 Group = tuple[Any, ...]
 Row = dict[str, Any]
 
-_CURVE_OPTIONS = (
-    "confidence",
-    "interval_scale",
-    "horizon",
-    "grid",
-    "minimum_at_risk",
-    "small_counts",
-    "weights",
-)
 _LOG_RANK_FIGURES = (
     "group_a",
     "group_b",
@@ -123,7 +114,7 @@ class ExactReference:
 
     def _curves(self, model: str) -> dict[Group, list[CurveRow]]:
         call = self.calls[model]
-        options = {name: call.options[name] for name in _CURVE_OPTIONS if name in call.options}
+        options = {name: call.options[name] for name in CURVE_OPTIONS if name in call.options}
         return survival_curves(self._spells(call.spells or "", call.by), **options)
 
     def _incidences(self, call: Provenance) -> Table:
