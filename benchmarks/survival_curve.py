@@ -191,7 +191,11 @@ def compiled_curve(folder: Path, options: str) -> str:
     for command in ("deps", "compile"):
         done = subprocess.run(
             [sys.executable, "-m", "dbt.cli.main", "--quiet", command],
-            cwd=project, env=environment, capture_output=True, text=True, check=False,
+            cwd=project,
+            env=environment,
+            capture_output=True,
+            text=True,
+            check=False,
         )
         if done.returncode:
             sys.exit(f"dbt {command} failed:\n{done.stdout}{done.stderr}")

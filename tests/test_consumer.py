@@ -212,8 +212,10 @@ def test_the_membership_curve_agrees_with_the_reference_estimator(built: Consume
         fit = reference(of)
         survival = fit.survival_function_at_times(part["duration"]).to_numpy()
         np.testing.assert_allclose(part["survival"], survival, rtol=1e-9, atol=1e-12)
-        at_risk = [((of["entry"] < t) & (t <= of["duration"])).sum() if t else (of["entry"] == 0).sum()
-                   for t in part["duration"]]
+        at_risk = [
+            ((of["entry"] < t) & (t <= of["duration"])).sum() if t else (of["entry"] == 0).sum()
+            for t in part["duration"]
+        ]
         assert part["at_risk"].tolist() == at_risk
 
 
@@ -292,9 +294,7 @@ def test_a_user_can_put_an_own_macro_in_a_macros_place(fresh: Consumer) -> None:
         "from ({{ spellcurve.default__survival_curve(*varargs, **kwargs) }}) as own\n"
         "{% endmacro %}\n",
     )
-    fresh.write(
-        "models/members/own_curve.sql", "{{ spellcurve.survival_curve(ref('membership_spells')) }}\n"
-    )
+    fresh.write("models/members/own_curve.sql", "{{ spellcurve.survival_curve(ref('membership_spells')) }}\n")
     wanted = ("memberships", "membership_spells", "own_curve")
     fresh.build("--select", *wanted, "--exclude-resource-type", "test")
     curve = fresh.table("own_curve").sort_values("duration")

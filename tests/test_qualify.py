@@ -179,6 +179,23 @@ def test_an_interruption_cleans_up(package, number, place):
     assert [signal.getsignal(one) for one in (signal.SIGINT, signal.SIGTERM)] == handlers
 
 
+@pytest.mark.filterwarnings("ignore::pytest.PytestUnraisableExceptionWarning")
+@pytest.mark.parametrize("place", [1, 4], ids=["early", "late"])
+def test_an_interruption_that_python_loses_counts_too(package, place):
+    class Interrupting:
+        def __del__(self) -> None:
+            signal.raise_signal(signal.SIGTERM)
+
+    def announce(doing: str, done: int, of: int) -> None:
+        if done == place:
+            Interrupting()
+
+    before = duckdb_schemas(package / "published.duckdb")
+    with pytest.raises(KeyboardInterrupt, match=r"reference_spellcurve_[0-9a-f]+ was dropped"):
+        spellcurve.qualify(profile="spellcurve", profiles_dir=package, package=package, announce=announce)
+    assert duckdb_schemas(package / "published.duckdb") == before
+
+
 def test_a_model_that_cannot_be_built_is_named_and_cleaned_up_after(tmp_path):
     package = copied_to(tmp_path / "package").folder
     model = package / "models" / "reference" / "reference_remission_curve.sql"

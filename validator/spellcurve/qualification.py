@@ -253,6 +253,7 @@ def _qualify(
     )
 
     def step(place: int) -> None:
+        warehouse.stop_if_interrupted()
         announce(steps[place], place, len(steps))
 
     step(0)
@@ -271,6 +272,7 @@ def _qualify(
             environment = warehouse.environment()
             figures = _figures(published, warehouse.rows_of("reference_agreement"))
             checked = _compare_models(warehouse, models, folder)
+        warehouse.stop_if_interrupted()
     except BaseException as error:
         left_behind = _KEPT if keep else warehouse.drop()
         told = f"The scratch schema {warehouse.schema} was dropped."
@@ -332,10 +334,15 @@ def _source(row: Mapping[str, str]) -> Source:
 class _Warehouse(Project):
     """The package's own dbt project on the user's warehouse; all that it writes is in one scratch schema."""
 
-    #: Set by a signal: dbt makes an error of its own of an interruption.
+    #: Set by a signal: dbt makes an error of its own of an interruption, and Python may lose one.
     interrupted = False
     #: Whether the scratch schema is ours to drop.
     claimed = False
+
+    def stop_if_interrupted(self) -> None:
+        """Python loses an interruption that comes while it destroys an object; here it is found again."""
+        if self.interrupted:
+            raise KeyboardInterrupt
 
     def dbt(self, command: str, *arguments: str, variables: Mapping[str, Any] | None = None) -> Any:
         """As in ``Project``; an interruption goes through as one."""
