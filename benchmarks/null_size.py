@@ -1,11 +1,10 @@
 """How often tests of groups reject where there is no difference: 2,000 small data sets in one query.
 
-    python benchmarks/null_size.py [--simulations 2000] [--groups 2] [--of-each 50] [--seed 5]
+    python benchmarks/null_size.py [--simulations 2000] [--seed 5]
 
-Each data set has 100 spells in two groups of 50 (``--groups``, ``--of-each``). All spells have the same
-distribution, whole durations with many ties; a third or so are censored, and one in four enters late. One
-query tests all of them (``by='simulation'``), once for each weighting. Prints the table that
-docs/comparisons.md has.
+The data sets of a design have groups of one size. All spells have the same distribution, whole durations
+with many ties; a third or so are censored, and one in four enters late. One query tests all data sets of a
+design (``by='simulation'``), once for each weighting. Prints the table that docs/comparisons.md has.
 """
 
 from __future__ import annotations
@@ -32,6 +31,8 @@ WEIGHTINGS = (
     "fleming-harrington(0, 1)",
     "fleming-harrington(1, 1)",
 )
+#: Groups, and spells in each.
+DESIGNS = ((3, 20), (2, 50), (2, 100), (2, 200))
 COLUMNS = {
     "simulation": "bigint",
     "plan": "bigint",
@@ -82,21 +83,23 @@ def main(arguments: list[str] | None = None) -> None:
     """Simulate, test and print."""
     parser = argparse.ArgumentParser(description=__doc__.splitlines()[0] if __doc__ else None)
     parser.add_argument("--simulations", type=int, default=2000)
-    parser.add_argument("--groups", type=int, default=2)
-    parser.add_argument("--of-each", type=int, default=50)
     parser.add_argument("--seed", type=int, default=5)
     options: Any = parser.parse_args(arguments)
     engine = DuckDB(Path(tempfile.mkdtemp()))
-    load(engine, simulated(options.simulations, options.groups, options.of_each, options.seed))
-    print("| weighting | data sets | p ≤ 0.05 | share | sampling error of 5% (two) |")
-    print("| --- | --- | --- | --- | --- |")
-    for weighting in WEIGHTINGS:
-        tested, rejected = rejections(engine, weighting, options.groups)
-        reach = 2 * (0.05 * 0.95 / tested) ** 0.5
-        print(
-            f"| {weighting} | {tested:,} | {rejected} | {rejected / tested:.1%} | "
-            f"{0.05 - reach:.1%} to {0.05 + reach:.1%} |"
-        )
+    shares: dict[str, list[str]] = {weighting: [] for weighting in WEIGHTINGS}
+    for groups, of_each in DESIGNS:
+        load(engine, simulated(options.simulations, groups, of_each, options.seed))
+        for weighting in WEIGHTINGS:
+            tested, rejected = rejections(engine, weighting, groups)
+            if tested != options.simulations:
+                sys.exit(f"{weighting}: {tested} of {options.simulations} data sets were tested.")
+            shares[weighting].append(f"{rejected / tested:.2%}")
+    print("| weighting | " + " | ".join(f"{groups} of {of_each}" for groups, of_each in DESIGNS) + " |")
+    print("| --- |" + " --- |" * len(DESIGNS))
+    for weighting, row in shares.items():
+        print(f"| {weighting} | " + " | ".join(row) + " |")
+    reach = 2 * (0.05 * 0.95 / options.simulations) ** 0.5
+    print(f"\nSampling error of 5% (two): {0.05 - reach:.2%} to {0.05 + reach:.2%}")
 
 
 if __name__ == "__main__":
