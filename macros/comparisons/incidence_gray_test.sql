@@ -326,7 +326,7 @@ judged as (
             when rank_so_far < group_count - 1 then 'fewer_degrees_of_freedom'
             else 'compared'
         end as status
-    from matrix_{{ most_groups - 1 }}
+    from matrix_eliminated
     where row_at = 0 and column_at = 0
 ),
 

@@ -236,7 +236,7 @@ comparisons as (
         0 as lacks_reference
         {%- endif %}
         {%- endif %}
-    from matrix_{{ most_groups - 1 }}
+    from matrix_eliminated
     where row_at = -1 or (row_at = 0 and column_at = 0)
 ),
 

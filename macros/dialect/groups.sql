@@ -7,7 +7,7 @@
     {{ return(50) }}
 {% endmacro %}
 
-{# Spark goes over a plan 100 times at most before it gives up, unless spark.sql.analyzer.maxIterations says more. #}
-{% macro spark___most_groups() %}
+{# Databricks goes over a plan 100 times at most before it gives up, unless spark.sql.analyzer.maxIterations says more. #}
+{% macro databricks___most_groups() %}
     {{ return(20) }}
 {% endmacro %}
