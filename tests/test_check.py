@@ -183,6 +183,43 @@ def test_a_curve_that_is_older_than_its_spells_is_called_stale(consumer):
     assert found.verdict == STALE and "build it again" in found.note
 
 
+READ_OUTS = {
+    "own_shares": "survival_at(ref('membership_curve'), [30, 365], by='plan')",
+    "own_medians": "survival_quantiles(ref('membership_curve'), by='plan')",
+    "own_difference": "difference_at(ref('membership_curve'), 'plan', [90, 365], 'household')",
+    "own_causes": "cumulative_incidence(ref('membership_spells'), by='plan')",
+    "own_causes_at": "incidence_at(ref('own_causes'), [30, 365], by='plan')",
+}
+
+
+def write_read_outs(consumer: Consumer) -> None:
+    for name, call in READ_OUTS.items():
+        table = "{{ config(materialized='table') }}"
+        consumer.write(f"models/more/{name}.sql", f"{table}\n{{{{ spellcurve.{call} }}}}\n")
+    consumer.build("--select", *READ_OUTS)
+
+
+def test_what_was_read_off_a_stale_curve_is_stale(consumer):
+    write_read_outs(consumer)
+    assert {found.verdict for found in verdicts(consumer, *READ_OUTS).values()} == {AGREES}
+    execute(consumer, "update analytics.membership_spells set duration = duration + 1 where event = 1")
+    found = verdicts(consumer, *READ_OUTS)
+    assert {name: one.verdict for name, one in found.items()} == dict.fromkeys(READ_OUTS, STALE)
+    assert "right for membership_curve as that stands, which is stale" in found["own_shares"].note
+    assert "right for own_causes as that stands" in found["own_causes_at"].note
+    consumer.build("--select", "membership_curve", "own_causes", "--exclude", "resource_type:test")
+    found = verdicts(consumer, "own_shares", "own_causes_at")
+    assert all(one.verdict == STALE and "its table holds others" in one.note for one in found.values())
+
+
+def test_what_was_read_off_a_wrong_curve_disagrees(consumer):
+    write_read_outs(consumer)
+    break_the_curve(consumer)
+    consumer.build("--select", "own_shares", "--exclude", "resource_type:test")
+    found = verdicts(consumer, "membership_curve", "own_shares")
+    assert {one.verdict for one in found.values()} == {DISAGREES}
+
+
 def test_spells_as_of_another_day_are_called_stale(consumer):
     model = consumer.folder / "models" / "members" / "membership_spells.sql"
     model.write_text(model.read_text().replace("as_of='2024-07-01'", "as_of='2024-06-20'"))
