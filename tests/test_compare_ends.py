@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections import Counter
+from datetime import date
 from fractions import Fraction
 from typing import Any
 
@@ -13,6 +14,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from spellcurve import compare_ends, exact_incidence
 from spellcurve.compare_readouts import compare_readouts
+from spellcurve.compare_spells import compare_rows
 from spellcurve.exact_incidence import History, Unit
 from spellcurve.provenance import Provenance, first_provenance
 from test_incidence import in_groups, rows_with_causes
@@ -153,6 +155,18 @@ def provenance_of(engine: Any, call: str) -> Provenance:
 def places(rows: list[dict[str, Any]]) -> Counter:
     names = ("subject_id", "given_time", "given_status", "fault")
     return Counter(tuple(row.get(name) for name in names) for row in rows)
+
+
+def test_a_time_that_is_no_text_is_not_compared_as_text(each_engine):
+    rows = [{"who": None, "since": day, "state": nr} for day in (date(2024, 3, 1), None) for nr in (1, 2)]
+    each_engine.load("history", {"who": "text", "since": "date", "state": "bigint"}, rows)
+    call = "state_shares('history', 'who', 'since', 'state', ['1', '2'], as_of='2024-09-01', rows='faulty')"
+    recomputed = compare_ends.Recomputed(
+        lambda relation, select: each_engine.query(select.replace("{source}", relation)), each_engine.quote
+    )
+    refused = recomputed.refused(provenance_of(each_engine, call))
+    assert len(refused) == 4 and all(row.keys() == {"subject_id", "given_status", "fault"} for row in refused)
+    assert compare_rows(each_engine.run(call), refused, "refused row").agrees
 
 
 def test_other_macros_are_refused():

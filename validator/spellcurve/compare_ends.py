@@ -117,27 +117,12 @@ class Recomputed:
     def refused(self, provenance: Provenance) -> list[Row]:
         """The rows that a call with rows='faulty' should give, as often as each occurs, without detail."""
         if provenance.macro == "state_shares":
-            return [
-                {
-                    "subject_id": row["subject"],
-                    "given_time": _as_text(row["effective"]),
-                    "given_status": row["status"],
-                    "fault": row["fault"],
-                }
-                for row in self._changes_of_state(provenance)
-                if row["fault"]
-            ]
+            changes = [row for row in self._changes_of_state(provenance) if row["fault"]]
+            given = {"given_time": "effective", "given_status": "status"}
+            return _refused(changes, given)
         _, events = self._placed_events(provenance)
-        return [
-            {
-                "subject_id": event["subject"],
-                "given_time": _as_text(event["happened"]),
-                "fault": event["fault"],
-            }
-            for event in events
-            if event["fault"]
-            for _ in range(event["events"])
-        ]
+        refused = [event for event in events if event["fault"] for _ in range(event["events"])]
+        return _refused(refused, {"given_time": "happened"})
 
     # What calls read
 
@@ -494,6 +479,21 @@ class Recomputed:
                 counts = ("at_risk", "arrivals", "departures")
                 rows.append(_published(row, counts, ("share",), all_at_risk, options))
         return rows
+
+
+def _refused(rows: Sequence[Row], given: Mapping[str, str]) -> list[Row]:
+    """Refused rows; what is not text comes without the text that the warehouse makes of it in its own way."""
+    told = {
+        name: source
+        for name, source in given.items()
+        if all(row[source] is None or isinstance(row[source], str) for row in rows)
+    }
+    return [
+        {"subject_id": row["subject"]}
+        | {name: row[source] for name, source in told.items()}
+        | {"fault": row["fault"]}
+        for row in rows
+    ]
 
 
 def names(provenance: Provenance) -> tuple[str, ...]:
