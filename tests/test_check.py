@@ -186,6 +186,8 @@ def test_a_curve_that_is_older_than_its_spells_is_called_stale(consumer):
 READ_OUTS = {
     "own_shares": "survival_at(ref('membership_curve'), [30, 365], by='plan')",
     "own_medians": "survival_quantiles(ref('membership_curve'), by='plan')",
+    "own_conditional": "survival_beyond(ref('membership_curve'), [0, 30], by='plan')",
+    "own_means": "restricted_mean(ref('membership_curve'), [90, 365], by='plan')",
     "own_difference": "difference_at(ref('membership_curve'), 'plan', [90, 365], 'household')",
     "own_causes": "cumulative_incidence(ref('membership_spells'), by='plan')",
     "own_causes_at": "incidence_at(ref('own_causes'), [30, 365], by='plan')",
@@ -210,6 +212,26 @@ def test_what_was_read_off_a_stale_curve_is_stale(consumer):
     consumer.build("--select", "membership_curve", "own_causes", "--exclude", "resource_type:test")
     found = verdicts(consumer, "own_shares", "own_causes_at")
     assert all(one.verdict == STALE and "its table holds others" in one.note for one in found.values())
+
+
+def test_read_outs_of_a_table_that_no_call_makes_are_checked_against_it(consumer):
+    """Here a copy of a curve; every read-out of one."""
+    consumer.write("models/more/copied.sql", "select * from {{ ref('membership_curve') }}\n")
+    calls = {
+        "copied_shares": "survival_at(ref('copied'), [0, 30, 3650], by='plan')",
+        "copied_medians": "survival_quantiles(ref('copied'), [0.9, 0.5], by='plan')",
+        "copied_means": "restricted_mean(ref('copied'), [90, 365], by='plan')",
+        "copied_beyond": "survival_beyond(ref('copied'), [0, 30, 90], by='plan')",
+        "copied_difference": "difference_at(ref('copied'), 'plan', [90, 365], 'household')",
+        "copied_means_difference": "difference_in_restricted_mean(ref('copied'), 'plan', 180, 'household')",
+    }
+    for name, call in calls.items():
+        consumer.write(f"models/more/{name}.sql", f"{{{{ spellcurve.{call} }}}}\n")
+    consumer.build("--select", "copied", *calls)
+    found = verdicts(consumer, *calls)
+    assert {name: one.verdict for name, one in found.items()} == dict.fromkeys(calls, AGREES)
+    assert all("from the curve as published" in one.note for one in found.values())
+    assert all(one.comparisons[0].figures > 5 for one in found.values())
 
 
 def test_what_was_read_off_a_wrong_curve_disagrees(consumer):

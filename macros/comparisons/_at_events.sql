@@ -81,14 +81,7 @@
 {%- set segment = spellcurve._partition_by(compared.segments) -%}
 {{ spellcurve._risk_sets(spells, compared.columns, none, 'fractional') }},
 
-numbers as (
-    {%- for number in range(1, most_groups + 1) %}
-    select {{ number }} as number
-    {%- if not loop.last %}
-    union all
-    {%- endif %}
-    {%- endfor %}
-),
+{{ spellcurve._whole_numbers('numbers', 'number', 1, most_groups) }},
 
 numbered_risk_sets as (
     select

@@ -30,14 +30,7 @@
     {%- set body -%}
 with {{ spellcurve._cause_risk_sets(spells, compared.columns, none, 'fractional', labels) }},
 
-numbers as (
-    {%- for number in range(1, most_groups + 1) %}
-    select {{ number }} as number
-    {%- if not loop.last %}
-    union all
-    {%- endif %}
-    {%- endfor %}
-),
+{{ spellcurve._whole_numbers('numbers', 'number', 1, most_groups) }},
 
 numbered_risk_sets as (
     select
@@ -289,14 +282,7 @@ covariances as (
     group by {{ each }}first_group, second_group
 ),
 
-places as (
-    {%- for place in range(1, 6) %}
-    select {{ place }} as place
-    {%- if not loop.last %}
-    union all
-    {%- endif %}
-    {%- endfor %}
-),
+{{ spellcurve._whole_numbers('places', 'place', 1, 5) }},
 
 -- the covariances off the diagonal, their signs turned, bordered in row and column 0 by the scores
 matrix_0 as (

@@ -147,14 +147,7 @@ sums_with_total as (
     from sums
 ),
 
-places as (
-    {%- for place in range(1, 7) %}
-    select {{ place }} as place
-    {%- if not loop.last %}
-    union all
-    {%- endif %}
-    {%- endfor %}
-),
+{{ spellcurve._whole_numbers('places', 'place', 1, 6) }},
 
 -- the covariances off the diagonal, their signs turned, bordered in row and column 0 by the scores; the rows of pairs stand aside at -1
 matrix_0 as (

@@ -114,7 +114,7 @@ rates_of_arms as (
     cross join arms
 ),
 
-{{ spellcurve._one_row_a_unit('rates_of_arms', longest) }},
+{{ spellcurve._repeated_rows('units', 'rates_of_arms', longest) }},
 
 -- the unit at whose end the comparison is looked at, how long spells were taken in until then, and how long none were
 times as (

@@ -55,13 +55,7 @@ with outcomes as (
     group by {{ spellcurve._each_then_comma(keys) }}entry, duration
 ),
 
-sides as (
-    select 1 as side
-    union all
-    select 2 as side
-    union all
-    select 3 as side
-),
+{{ spellcurve._whole_numbers('sides', 'side', 1, 3) }},
 
 -- each outcome in the band where it ends (1) and in the one where it enters late (2); every group has its first band (3)
 turns as (

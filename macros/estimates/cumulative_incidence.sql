@@ -29,14 +29,9 @@
     {%- set by = spellcurve._check_columns(caller_name, 'by', by, spellcurve._cumulative_incidence_columns()) -%}
     {%- do spellcurve._check_share(caller_name, 'confidence', confidence) -%}
     {%- do spellcurve._check_choice(caller_name, 'interval_scale', interval_scale, spellcurve._interval_scales()) -%}
-    {%- do spellcurve._check_choice(caller_name, 'grid', grid, ['steps', 'every']) -%}
-    {%- do spellcurve._check_choice(caller_name, 'small_counts', small_counts, ['keep', 'hide']) -%}
+    {%- do spellcurve._check_rows_wanted(caller_name, grid, horizon, minimum_at_risk, small_counts) -%}
     {%- do spellcurve._check_choice(caller_name, 'weights', weights, ['whole', 'fractional']) -%}
     {%- do spellcurve._check_choice(caller_name, 'others', others, ['competing', 'censored']) -%}
-    {%- do spellcurve._check_whole(caller_name, 'minimum_at_risk', minimum_at_risk, 0) -%}
-    {%- if horizon is not none -%}
-        {%- do spellcurve._check_whole(caller_name, 'horizon', horizon, 0) -%}
-    {%- endif -%}
     {%- set labels = spellcurve._cause_labels(caller_name, causes) -%}
     {%- set groups = spellcurve._aliases(by, 'group_') -%}
     {%- set each_group = spellcurve._each_then_comma(groups) -%}
@@ -212,15 +207,7 @@ rows_wanted as (
 select
     {{ spellcurve._aliases_as(groups, by) }}cause,
     {{ spellcurve._integer('duration') }} as duration,
-    {%- set enough = 'case when at_risk >= ' ~ minimum_at_risk ~ ' then ' %}
-    {%- for name in ['at_risk', 'events'] %}
-    {%- set count = spellcurve._count(name, weights) %}
-    {{ enough ~ count ~ ' end' if small_counts == 'hide' and minimum_at_risk > 0 else count }} as {{ name }},
-    {%- endfor %}
-    {%- for name in estimates %}
-    {%- set figure = spellcurve._double(name) %}
-    {{ enough ~ figure ~ ' end' if minimum_at_risk > 0 else figure }} as {{ name }}{{ ',' if not loop.last }}
-    {%- endfor %}
+    {{ spellcurve._published_columns(['at_risk', 'events'], estimates, minimum_at_risk, small_counts, weights) }}
     {%- if others == 'censored' %},
     {{ spellcurve._as_text("'censored'") }} as others
     {%- endif %}

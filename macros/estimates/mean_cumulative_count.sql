@@ -31,17 +31,12 @@
     {%- do spellcurve._check_column(caller_name, 'happened', happened) -%}
     {%- do spellcurve._check_share(caller_name, 'confidence', confidence) -%}
     {%- do spellcurve._check_choice(caller_name, 'interval_scale', interval_scale, ['log', 'linear']) -%}
-    {%- do spellcurve._check_choice(caller_name, 'grid', grid, ['steps', 'every']) -%}
-    {%- do spellcurve._check_choice(caller_name, 'small_counts', small_counts, ['keep', 'hide']) -%}
+    {%- do spellcurve._check_rows_wanted(caller_name, grid, horizon, minimum_at_risk, small_counts) -%}
     {%- do spellcurve._check_choice(caller_name, 'weights', weights, ['whole', 'fractional']) -%}
     {%- do spellcurve._check_choice(caller_name, 'happened_as', happened_as, ['moment', 'tenure']) -%}
     {%- do spellcurve._check_choice(caller_name, 'variance', variance, ['robust', 'poisson']) -%}
     {%- do spellcurve._check_choice(caller_name, 'rows', rows, ['sound', 'faulty']) -%}
     {%- do spellcurve._check_choice(caller_name, 'unit', unit, ['day', 'week', 'month', 'hour', 'minute']) -%}
-    {%- do spellcurve._check_whole(caller_name, 'minimum_at_risk', minimum_at_risk, 0) -%}
-    {%- if horizon is not none -%}
-        {%- do spellcurve._check_whole(caller_name, 'horizon', horizon, 0) -%}
-    {%- endif -%}
     {%- set groups = spellcurve._aliases(by, 'group_') -%}
     {%- set provenance = spellcurve._provenance(caller_name, {'spells': spells, 'events': events}, {
         'subject': subject, 'happened': happened, 'by': by, 'confidence': confidence, 'interval_scale': interval_scale,
@@ -139,15 +134,7 @@ rows_wanted as (
 
 select
     {{ spellcurve._aliases_as(groups, by) }}{{ spellcurve._integer('duration') }} as duration,
-    {%- set enough = 'case when at_risk >= ' ~ minimum_at_risk ~ ' then ' %}
-    {%- for name in ['at_risk', 'events'] %}
-    {%- set count = spellcurve._count(name, weights) %}
-    {{ enough ~ count ~ ' end' if small_counts == 'hide' and minimum_at_risk > 0 else count }} as {{ name }},
-    {%- endfor %}
-    {%- for name in estimates %}
-    {%- set figure = spellcurve._double(name) %}
-    {{ enough ~ figure ~ ' end' if minimum_at_risk > 0 else figure }} as {{ name }}{{ ',' if not loop.last }}
-    {%- endfor %}
+    {{ spellcurve._published_columns(['at_risk', 'events'], estimates, minimum_at_risk, small_counts, weights) }}
 from rows_wanted
     {%- endset -%}
     {{ return(provenance ~ '\n' ~ body) }}
@@ -290,13 +277,7 @@ rows_judged as (
     {%- set partition = spellcurve._partition_by(groups) -%}
     {%- set at_duration = spellcurve._partition_by(groups + ['duration']) -%}
     {%- set subject_key = each_group ~ 'subject_id, unit_number, weight' -%}
-sides as (
-    select 1 as side
-    union all
-    select 2 as side
-    union all
-    select 3 as side
-),
+{{ spellcurve._whole_numbers('sides', 'side', 1, 3) }},
 
 -- an event (1), or a spell as it ends (1), enters late (2) and starts (3)
 turns as (

@@ -35,13 +35,8 @@
     }.items() -%}
         {%- do spellcurve._check_column(caller_name, argument, name) -%}
     {%- endfor -%}
-    {%- do spellcurve._check_choice(caller_name, 'grid', grid, ['steps', 'every']) -%}
-    {%- do spellcurve._check_choice(caller_name, 'small_counts', small_counts, ['keep', 'hide']) -%}
-    {%- do spellcurve._check_whole(caller_name, 'minimum_at_risk', minimum_at_risk, 0) -%}
+    {%- do spellcurve._check_rows_wanted(caller_name, grid, horizon, minimum_at_risk, small_counts) -%}
     {%- do spellcurve._check_whole(caller_name, 'most_durations', most_durations, 1) -%}
-    {%- if horizon is not none -%}
-        {%- do spellcurve._check_whole(caller_name, 'horizon', horizon, 0) -%}
-    {%- endif -%}
     {%- set states = spellcurve._check_states(caller_name, states) -%}
     {%- set groups = spellcurve._aliases(by, 'group_') -%}
     {%- set provenance = spellcurve._provenance(caller_name, {'relation': relation}, {
@@ -133,13 +128,7 @@ select
         {%- endfor %}
     end as state,
     {{ spellcurve._integer('duration') }} as duration,
-    {%- set enough = 'case when all_at_risk >= ' ~ minimum_at_risk ~ ' then ' %}
-    {%- for name in counts %}
-    {%- set count = spellcurve._integer(name) %}
-    {{ enough ~ count ~ ' end' if small_counts == 'hide' and minimum_at_risk > 0 else count }} as {{ name }},
-    {%- endfor %}
-    {%- set figure = spellcurve._double('share') %}
-    {{ enough ~ figure ~ ' end' if minimum_at_risk > 0 else figure }} as share
+    {{ spellcurve._published_columns(counts, ['share'], minimum_at_risk, small_counts, 'whole', 'all_at_risk') }}
 from rows_wanted
     {%- endset -%}
     {{ return(provenance ~ '\n' ~ body) }}
@@ -325,13 +314,7 @@ pieces as (
     {%- set each_group = spellcurve._each_then_comma(groups) -%}
     {%- set partition = spellcurve._partition_by(groups) -%}
     {%- set numbers = range(1, states + 1) -%}
-sides as (
-    select 1 as side
-    union all
-    select 2 as side
-    union all
-    select 3 as side
-),
+{{ spellcurve._whole_numbers('sides', 'side', 1, 3) }},
 
 -- each stay as it ends (1), as it begins later than at 0 (2), and at 0 (3)
 turns as (

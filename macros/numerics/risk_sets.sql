@@ -103,33 +103,3 @@ risk_sets as (
         {{ return(spellcurve._integer('case when floor(' ~ expression ~ ') = ' ~ expression ~ ' then ' ~ expression ~ ' end')) }}
     {%- endif -%}
 {% endmacro %}
-
-
-{#
-    The CTEs that end with `units`: each row of a CTE as often as `times` says, with units_on = 0, 1, …, times - 1. Digit by digit, so
-    that it is a plain join everywhere; up to 10 million times a row.
-#}
-{% macro _one_row_a_unit(cte, times) -%}
-digits as (
-    {%- for digit in range(10) %}
-    select {{ digit }} as digit
-    {%- if not loop.last %}
-    union all
-    {%- endif %}
-    {%- endfor %}
-),
-
-units as (
-    {%- set parts = [] %}
-    {%- for power in range(6, -1, -1) %}
-    {%- do parts.append('digits_' ~ power ~ '.digit * ' ~ 10 ** power) %}
-    {%- endfor %}
-    select
-        {{ cte }}.*,
-        {{ parts | join(' + ') }} as units_on
-    from {{ cte }}
-    {%- for power in range(6, -1, -1) %}
-    inner join digits as digits_{{ power }} on {{ parts[:7 - power] | join(' + ') }} < {{ times }}
-    {%- endfor %}
-)
-{%- endmacro %}

@@ -43,7 +43,7 @@ stretches_with_bands as (
     from stretches
 ),
 
-{{ spellcurve._one_row_a_unit('stretches_with_bands', 'last_band - first_band + 1') }},
+{{ spellcurve._repeated_rows('units', 'stretches_with_bands', 'last_band - first_band + 1') }},
 
 pieces as (
     select

@@ -389,7 +389,7 @@ class _Checker:
         rows = self.query(call, relation, "select * from {source}")
         for row in sorted(rows, key=lambda row: int(row["duration"])):
             group = tuple(row[name] for name in by)
-            figures = {name: _exact(row.get(name)) for name in FIGURES}
+            figures = {name: _as_fraction(row.get(name)) for name in FIGURES}
             published.setdefault(group, []).append(CurveRow(group, row["duration"], **figures))
         for group, own in published.items():
             published[group] = list(_with_greenwood_sums(own))
@@ -776,6 +776,10 @@ def _exact(value: Any) -> Any:
         if isinstance(value, float) and value == value and abs(value) != float("inf")
         else value
     )
+
+
+def _as_fraction(value: Any) -> Any:
+    return Fraction(value) if isinstance(value, int) else _exact(value)
 
 
 def _with_bands(
