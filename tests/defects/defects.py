@@ -116,10 +116,13 @@ DEFECTS = [
             "'floor(' ~ expression ~ ' / 2) * 2'",
             "curve",
         ),
+    ),
+    *_in(
+        "numerics/repeated_rows.sql",
         (
             "the grid lacks the last unit before a step",
-            "inner join digits as digits_{{ power }} on {{ parts[:7 - power] | join(' + ') }} < {{ times }}",
-            "inner join digits as digits_{{ power }} on {{ parts[:7 - power] | join(' + ') }} < greatest(1, {{ times }} - 1)",
+            "on {{ parts[:digits - power] | join(' + ') }} < {{ times }}",
+            "on {{ parts[:digits - power] | join(' + ') }} < greatest(1, {{ times }} - 1)",
             "curve_linear",
         ),
     ),
