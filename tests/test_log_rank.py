@@ -633,11 +633,12 @@ def test_one_in_twenty_is_rejected_where_nothing_differs(engine, weighting):
     assert tested == 2_000 and abs(rejected - 100) <= 2 * (2_000 * 0.05 * 0.95) ** 0.5
 
 
-def test_groups_that_differ_are_found(engine):
+@pytest.mark.parametrize("weighting", null_size.WEIGHTINGS)
+def test_groups_that_differ_are_found(engine, weighting):
     spells = null_size.simulated(500, groups=2, of_each=50, seed=20)
     spells["duration"] = spells["duration"] * np.where(spells["plan"] == 1, 2, 1)
     null_size.load(engine, spells)
-    assert null_size.rejections(engine, "log-rank", groups=2)[1] > 250
+    assert null_size.rejections(engine, weighting, groups=2)[1] > 250
 
 
 # Wrong calls

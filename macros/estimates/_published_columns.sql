@@ -1,6 +1,4 @@
-{#
-    Options that estimates with a row a duration share.
-#}
+{# Checks the options by which estimates say which rows and figures they publish. #}
 {% macro _check_rows_wanted(caller_name, grid, horizon, minimum_at_risk, small_counts) %}
     {%- do spellcurve._check_choice(caller_name, 'grid', grid, ['steps', 'every']) -%}
     {%- do spellcurve._check_choice(caller_name, 'small_counts', small_counts, ['keep', 'hide']) -%}
