@@ -179,12 +179,7 @@ cells_at_events as (
 {{ name }}_shares as (
     select
         *,
-        case when {{ events }} > 0 then {{ events }} / (2 * {{ of_risk }} - {{ events }}) else 0 end as {{ prefix }}_thin,
-        {%- if peto %}
-        0 as {{ prefix }}_takes_all
-        {%- else %}
-        case when {{ events }} > 0 and {{ events }} >= {{ at_risk }} * (1 - 1e-12) then 1 else 0 end as {{ prefix }}_takes_all
-        {%- endif %}
+        case when {{ events }} > 0 then {{ events }} / (2 * {{ of_risk }} - {{ events }}) else 0 end as {{ prefix }}_thin
     from {{ cte }}
 ),
 
@@ -192,9 +187,11 @@ cells_at_events as (
     select
         *,
         case
-            when {{ events }} > 0 and {{ prefix }}_takes_all = 0
-                then {{ spellcurve._log_of_share_left(events, of_risk, prefix ~ '_thin') }}
-            else 0
+            when {{ events }} <= 0 then 0
+            {%- if not peto %}
+            when {{ events }} >= {{ at_risk }} * (1 - 1e-12) then {{ spellcurve._log_of_nothing_left() }}
+            {%- endif %}
+            else {{ spellcurve._log_of_share_left(events, of_risk, prefix ~ '_thin') }}
         end as {{ prefix }}_step
     from {{ name }}_shares
 ),
@@ -202,7 +199,6 @@ cells_at_events as (
 {{ name }}_logs as (
     select
         *,
-        coalesce(max({{ prefix }}_takes_all) over ({{ upto }}), 0) as {{ prefix }}_ended,
         coalesce(sum({{ prefix }}_step) over ({{ upto }}), 0) as {{ prefix }}_log
     from {{ name }}_steps
 ),
@@ -212,7 +208,7 @@ cells_at_events as (
     select
         *,
         case
-            when {{ prefix }}_ended = 1 then 1
+            when {{ spellcurve._is_nothing_left(prefix ~ '_log') }} then 1
             when {{ prefix }}_log < -0.01e0 then 1 - {{ spellcurve._exp(prefix ~ '_log') }}
             else 0 - {{ spellcurve._horner(prefix ~ '_log', [1, 0.5, 1 / 6, 1 / 24, 1 / 120, 1 / 720]) }} * {{ prefix }}_log
         end as {{ prefix }}_gone
@@ -239,7 +235,7 @@ cells_at_events as (
         {%- endif %}
         case
             {%- if weighting.p > 0 %}
-            when {{ prefix }}_ended = 1 then 0
+            when {{ spellcurve._is_nothing_left(prefix ~ '_log') }} then 0
             {%- endif %}
             {%- if weighting.q > 0 %}
             when {{ prefix }}_gone <= 0 then 0

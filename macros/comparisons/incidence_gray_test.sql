@@ -95,9 +95,10 @@ hazards as (
 
 hazard_steps as (
     select
-        {{ each }}duration, group_number, group_count, events, other_events, at_risk, takes_all,
+        {{ each }}duration, group_number, group_count, events, other_events, at_risk,
         case
-            when ended > 0 and takes_all = 0 then {{ spellcurve._log_of_share_left('ended', 'at_risk', 'thin_share') }}
+            when takes_all = 1 then {{ spellcurve._log_of_nothing_left() }}
+            when ended > 0 then {{ spellcurve._log_of_share_left('ended', 'at_risk', 'thin_share') }}
             else 0
         end as log_step
     from hazards
@@ -106,8 +107,6 @@ hazard_steps as (
 running_sums as (
     select
         {{ each }}duration, group_number, group_count, events, other_events, at_risk,
-        max(takes_all) over ({{ so_far }}) as has_ended,
-        coalesce(max(takes_all) over ({{ before }}), 0) as had_ended,
         sum(log_step) over ({{ so_far }}) as log_survival,
         coalesce(sum(log_step) over ({{ before }}), 0) as log_survival_before
     from hazard_steps
@@ -116,8 +115,8 @@ running_sums as (
 survivals as (
     select
         {{ each }}duration, group_number, group_count, events, other_events, at_risk,
-        case when has_ended = 1 then 0 else {{ spellcurve._exp('log_survival') }} end as survival,
-        case when had_ended = 1 then 0 else {{ spellcurve._exp('log_survival_before') }} end as survival_before
+        {{ spellcurve._survival_of('log_survival') }} as survival,
+        {{ spellcurve._survival_of('log_survival_before') }} as survival_before
     from running_sums
 ),
 

@@ -148,9 +148,10 @@ hazards as (
 
 steps_of_table as (
     select
-        {{ each_group }}band, entering, events, censored, exposed, hazard_share, takes_all,
+        {{ each_group }}band, entering, events, censored, exposed, hazard_share,
         case
-            when events > 0 and takes_all = 0 then {{ spellcurve._log_of_share_left('events', 'exposed', 'thin_share') }}
+            when takes_all = 1 then {{ spellcurve._log_of_nothing_left() }}
+            when events > 0 then {{ spellcurve._log_of_share_left('events', 'exposed', 'thin_share') }}
             else 0
         end as log_step,
         case when events > 0 and takes_all = 0 then hazard_share / (exposed - events) else 0 end as greenwood_step
@@ -160,7 +161,6 @@ steps_of_table as (
 running_sums as (
     select
         {{ each_group }}band, entering, events, censored, exposed, hazard_share,
-        max(takes_all) over ({{ so_far }}) as has_ended,
         sum(log_step) over ({{ so_far }}) as log_survival,
         sum(greenwood_step) over ({{ so_far }}) as greenwood_sum
     from steps_of_table
@@ -168,8 +168,8 @@ running_sums as (
 
 figures as (
     select
-        {{ each_group }}band, entering, events, censored, exposed, hazard_share, has_ended, greenwood_sum,
-        case when has_ended = 1 then 0 else {{ spellcurve._exp('log_survival') }} end as survival
+        {{ each_group }}band, entering, events, censored, exposed, hazard_share, greenwood_sum,
+        {{ spellcurve._survival_of('log_survival') }} as survival
     from running_sums
 ),
 
@@ -178,7 +178,7 @@ rows_of_table as (
         {{ each_group }}band * {{ width }} as from_duration,
         (band + 1) * {{ width }} as to_duration,
         entering, censored, exposed, events, hazard_share, survival,
-        case when has_ended = 0 then survival * sqrt(greenwood_sum) end as std_error
+        case when survival > 0 then survival * sqrt(greenwood_sum) end as std_error
     from figures
 )
 

@@ -67,10 +67,14 @@ hazards as (
 
 steps_of_curve as (
     select
-        {{ row_key }}, own_hazard, other_hazard, takes_all,
+        {{ row_key }}, own_hazard, other_hazard,
         case when at_risk > 0 then 1 / at_risk else 0 end as one_of_them,
         case when takes_all = 0 and ended > 0 then 1 / (at_risk - ended) else 0 end as one_of_those_left,
-        case when ended > 0 and takes_all = 0 then {{ spellcurve._log_of_share_left('ended', 'at_risk', 'thin_share') }} else 0 end as log_step,
+        case
+            when takes_all = 1 then {{ spellcurve._log_of_nothing_left() }}
+            when ended > 0 then {{ spellcurve._log_of_share_left('ended', 'at_risk', 'thin_share') }}
+            else 0
+        end as log_step,
         case when ended > 0 and takes_all = 0 then hazard / (at_risk - ended) else 0 end as greenwood_step
     from hazards
 ),
@@ -78,8 +82,6 @@ steps_of_curve as (
 running_sums as (
     select
         {{ row_key }}, own_hazard, other_hazard, one_of_them, one_of_those_left,
-        max(takes_all) over ({{ so_far }}) as has_ended,
-        coalesce(max(takes_all) over ({{ before }}), 0) as had_ended,
         sum(log_step) over ({{ so_far }}) as log_survival,
         coalesce(sum(log_step) over ({{ before }}), 0) as log_survival_before,
         sum(greenwood_step) over ({{ so_far }}) as greenwood_sum,
@@ -90,8 +92,8 @@ running_sums as (
 survivals as (
     select
         {{ row_key }}, own_hazard, other_hazard, one_of_them, one_of_those_left, greenwood_sum, greenwood_before,
-        case when has_ended = 1 then 0 else {{ spellcurve._exp('log_survival') }} end as survival,
-        case when had_ended = 1 then 0 else {{ spellcurve._exp('log_survival_before') }} end as survival_before
+        {{ spellcurve._survival_of('log_survival') }} as survival,
+        {{ spellcurve._survival_of('log_survival_before') }} as survival_before
     from running_sums
 ),
 

@@ -53,6 +53,8 @@
     {%- set is_band = simultaneous != 'none' -%}
     {%- set z = 1.0 if is_band else spellcurve._normal_quantile(0.5 + confidence / 2) -%}
     {%- set reach = 'band_reach' if is_band else 'relative_error' -%}
+    {%- set own_columns = each_group ~ 'duration, at_risk, events, censored, is_step, hazard' -%}
+    {%- set row_columns = own_columns ~ (', next_at_risk, next_duration' if grid == 'every' else '') -%}
 
     {%- set ctes -%}
 {{ spellcurve._risk_sets(spells, by, horizon, weights) }},
@@ -69,7 +71,11 @@ hazards as (
 steps_of_curve as (
     select
         *,
-        case when events > 0 and takes_all = 0 then {{ spellcurve._log_of_share_left('events', 'at_risk', 'thin_share') }} else 0 end as log_step,
+        case
+            when takes_all = 1 then {{ spellcurve._log_of_nothing_left() }}
+            when events > 0 then {{ spellcurve._log_of_share_left('events', 'at_risk', 'thin_share') }}
+            else 0
+        end as log_step,
         case when events > 0 and takes_all = 0 then hazard / (at_risk - events) else 0 end as greenwood_step,
         case when events > 0 then hazard / at_risk else 0 end as hazard_variance_step
     from hazards
@@ -77,11 +83,12 @@ steps_of_curve as (
 
 running_sums as (
     select
-        {{ each_group }}duration, at_risk, events, censored, is_step, hazard,
+        {{ own_columns }},
+        {%- if grid == 'every' %}
         lead(at_risk) over ({{ partition }}order by duration) as next_at_risk,
         lead(duration) over ({{ partition }}order by duration) as next_duration,
+        {%- endif %}
         {%- set so_far = partition ~ 'order by duration rows between unbounded preceding and current row' %}
-        max(takes_all) over ({{ so_far }}) as has_ended,
         sum(log_step) over ({{ so_far }}) as log_survival,
         sum(greenwood_step) over ({{ so_far }}) as greenwood_sum,
         sum(hazard) over ({{ so_far }}) as cumulative_hazard,
@@ -93,13 +100,13 @@ running_sums as (
 {% endif %}
 figures as (
     select
-        {{ each_group }}duration, at_risk, events, censored, is_step, hazard, next_at_risk, next_duration, log_survival,
+        {{ row_columns }}, log_survival,
         case
-            when has_ended = 1 then 0
+            when {{ spellcurve._is_nothing_left('log_survival') }} then 0
             when log_survival < 0 then 1
             else 2
         end as stage,
-        case when has_ended = 1 then 0 else {{ spellcurve._exp('log_survival') }} end as survival,
+        {{ spellcurve._survival_of('log_survival') }} as survival,
         sqrt(greenwood_sum) as relative_error,
         {%- if is_band %}
         band_reach,
@@ -111,7 +118,7 @@ figures as (
 
 figures_with_bounds as (
     select
-        {{ each_group }}duration, at_risk, events, censored, is_step, hazard, next_at_risk, next_duration, survival,
+        {{ row_columns }}, survival,
         case stage when 1 then survival * relative_error when 2 then 0 end as std_error,
         case stage
             when 1 then {{ spellcurve._survival_bound(interval_scale, 'survival', 'log_survival', reach, z, -1) }}
@@ -131,18 +138,12 @@ figures_with_bounds as (
         'hazard', 'survival', 'std_error', 'survival_lower', 'survival_upper', 'cumulative_hazard', 'cumulative_hazard_std_error'
     ] -%}
     {%- set body -%}
-with {{ ctes }},
+with {{ ctes }}{{ ',' if grid == 'every' }}
 
-{% if grid == 'steps' -%}
-rows_wanted as (
-    select *
-    from figures_with_bounds
-    where is_step = 1{% if horizon is not none %} and duration <= {{ horizon }}{% endif %}
-)
-{%- else -%}
+{% if grid == 'every' -%}
 {{ spellcurve._repeated_rows('units', 'figures_with_bounds', 'coalesce(next_duration, duration + 1) - duration') }},
 
-rows_wanted as (
+rows_on_grid as (
     select
         {{ each_group }}duration + units_on as duration,
         case when units_on = 0 then at_risk else next_at_risk end as at_risk,
@@ -155,12 +156,17 @@ rows_wanted as (
     where duration + units_on <= {{ horizon }}
     {%- endif %}
 )
-{%- endif %}
 
+{% endif -%}
 select
     {{ spellcurve._aliases_as(groups, by) }}{{ spellcurve._integer('duration') }} as duration,
     {{ spellcurve._published_columns(['at_risk', 'events', 'censored'], estimates, minimum_at_risk, small_counts, weights) }}
-from rows_wanted
+{%- if grid == 'every' %}
+from rows_on_grid
+{%- else %}
+from figures_with_bounds
+where is_step = 1{% if horizon is not none %} and duration <= {{ horizon }}{% endif %}
+{%- endif %}
     {%- endset -%}
 
     {%- set options = {

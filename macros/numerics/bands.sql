@@ -10,11 +10,11 @@
 
 {#
     The CTEs that end with `rows_with_reach`: the columns of the CTE `from_cte`, which has group_1, …, duration, events, censored,
-    has_ended and greenwood_sum, and `band_reach`.
+    log_survival and greenwood_sum, and `band_reach`.
 #}
 {% macro _rows_with_reach(from_cte, simultaneous, confidence, groups, horizon) %}
     {%- set partition = spellcurve._partition_by(groups) | trim -%}
-    {%- set in_range = 'has_ended = 0' ~ (' and duration <= ' ~ horizon if horizon is not none else '') -%}
+    {%- set in_range = 'not ' ~ spellcurve._is_nothing_left('log_survival') ~ (' and duration <= ' ~ horizon if horizon is not none else '') -%}
 band_ranges as (
     select
         *,

@@ -35,16 +35,13 @@
     at_risk, events of the cause, all_events), one row a group, cause and duration.
 
     labels: what _cause_labels gave. Without labels, every cause that an event at risk has anywhere in the table stands in every group;
-    an event without a cause is of cause 'unknown'. The spells are read once; the grid of causes and durations is unrolled from the
+    an event without a cause is of cause 'unknown'. The grid of causes and durations is unrolled from the
     aggregate without a second reading of it.
 #}
 {% macro _cause_risk_sets(spells, by, horizon, weights, labels) %}
     {%- set groups = spellcurve._aliases(by, 'group_') -%}
     {%- set each_group = spellcurve._each_then_comma(groups) -%}
     {%- set partition = spellcurve._partition_by(groups) -%}
-    {%- set keys = [] -%}
-    {%- for name in by -%}{%- do keys.append(spellcurve._column(name)) -%}{%- endfor -%}
-    {%- set weight = spellcurve._double('weight') -%}
     {%- set cause_of_event = 'coalesce(' ~ spellcurve._as_text('cause') ~ ", 'unknown')" -%}
     {%- set counts = 'event = 1 and (entry < duration or entry = 0)' -%}
     {%- set own_cause -%}
@@ -60,56 +57,7 @@ case
     {%- endset -%}
     {%- set shown = [] -%}
     {%- for cause, label in labels or [] if label not in shown -%}{%- do shown.append(label) -%}{%- endfor -%}
-    {%- if horizon is none -%}
-        {%- set entry, duration = 'entry', 'duration' -%}
-    {%- else -%}
-        {%- set entry = 'least(entry, ' ~ (horizon + 1) ~ ')' -%}
-        {%- set duration = 'case when duration <= ' ~ horizon ~ ' then duration when entry < duration then ' ~ (horizon + 2)
-            ~ ' else ' ~ (horizon + 1) ~ ' end' -%}
-    {%- endif -%}
-outcomes as (
-    select
-        {{ spellcurve._columns_as(by, groups) }}{{ entry }} as entry,
-        {{ duration }} as duration,
-        {{ own_cause }} as own_cause,
-        sum(case when event = 1 then {{ weight }} else 0 end) as events,
-        sum({{ weight }}) as spells
-    from {{ spells }}
-    group by {{ spellcurve._each_then_comma(keys) }}{{ entry }}, {{ duration }}, {{ own_cause }}
-),
-
-sides as (
-    select 1 as side
-    union all
-    select 2 as side
-    union all
-    select 3 as side
-    {%- if horizon is not none %}
-    union all
-    select 4 as side
-    {%- endif %}
-),
-
--- each outcome as it leaves the risk set (1), enters it late (2), and makes sure of the rows at 0 (3) and at the horizon (4)
-turns as (
-    select
-        {{ each_group -}}
-        case side when 1 then duration when 2 then entry when 3 then 0{% if horizon is not none %} else {{ horizon }}{% endif %} end as duration,
-        case when side = 1 then own_cause end as own_cause,
-        case when side = 1 then events else 0 end as events,
-        case when side = 1 then spells else 0 end as leaving,
-        case when side = 2 then spells else 0 end as entered,
-        case when side = 2 then 0 else 1 end as is_step
-    from outcomes
-    cross join sides
-    where
-        side = 3
-        or (side = 1 and (entry < duration or entry = 0))
-        or (side = 2 and entry > 0 and entry < duration)
-        {%- if horizon is not none %}
-        or (side = 4 and duration > {{ horizon }} and entry < duration)
-        {%- endif %}
-),
+{{ spellcurve._turns(spells, by, horizon, own_cause) }},
 
 changes as (
     select

@@ -26,6 +26,26 @@
 {% endmacro %}
 
 
+{#
+    Logarithms of survival are summed. Where a step takes everyone the logarithm is minus infinity, for which not every warehouse has a
+    number: -1e100 stands in, to which no sum of other steps comes near (none is below -28).
+#}
+{% macro _log_of_nothing_left() %}
+    {{ return('-1e100') }}
+{% endmacro %}
+
+
+{% macro _is_nothing_left(log_survival) %}
+    {{ return(log_survival ~ ' < -1e50') }}
+{% endmacro %}
+
+
+{# Survival from the sum of its logarithms: exactly 0 once a step has taken everyone. #}
+{% macro _survival_of(log_survival) %}
+    {{ return('case when ' ~ spellcurve._is_nothing_left(log_survival) ~ ' then 0 else ' ~ spellcurve._exp(log_survival) ~ ' end') }}
+{% endmacro %}
+
+
 {% macro _interval_scales() %}
     {{ return(['linear', 'log', 'log-log', 'logit', 'arcsine']) }}
 {% endmacro %}
