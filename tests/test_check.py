@@ -131,9 +131,9 @@ def break_the_curve(consumer: Consumer) -> None:
     """Put a macro of the repo's own in the package's place, with a survival that is 1% too low."""
     source = (PACKAGE / "macros" / "estimates" / "survival_curve.sql").read_text()
     own = source[source.index("{% macro default__survival_curve") :]
-    right = "end as survival,"
+    right = "{{ spellcurve._survival_of('log_survival') }} as survival,"
     assert own.count(right) == 1
-    own = own.replace(right, "end * 0.99 as survival,")
+    own = own.replace(right, "0.99 * (" + right.replace(" as", ") as"))
     consumer.write("macros/survival_curve.sql", own)
     project = (consumer.folder / "dbt_project.yml").read_text()
     order = "search_order: ['harrow_lane_analytics', 'spellcurve']"

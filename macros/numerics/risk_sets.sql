@@ -59,10 +59,10 @@ risk_sets as (
         {%- do keys.append(own_cause) -%}
         {%- do names.append('own_cause') -%}
     {%- endif -%}
-    {#- of what comes after the horizon it only matters that it does -#}
+    {#- beyond the horizon it only matters that the spell was still there, and entered before it left -#}
     {%- set longest, latest = 'duration', 'entry' -%}
     {%- if horizon is not none -%}
-        {%- set longest, latest = 'least(duration, ' ~ (horizon + 1) ~ ')', 'least(entry, ' ~ (horizon + 1) ~ ')' -%}
+        {%- set longest, latest = 'least(duration, ' ~ (horizon + 2) ~ ')', 'least(entry, ' ~ (horizon + 1) ~ ')' -%}
     {%- endif -%}
 {{ spellcurve._outcomes(spells, keys, names, longest, latest) }},
 

@@ -86,10 +86,11 @@ STAYS = {
     ],
     "trial": [(0, 2, 0, None, 1), (0, 7, 0, None, 2)],
 }
-# A curve that reaches 0 before others enter, and one of which hardly anything is left.
+# A curve that reaches 0 before others enter, one of which hardly anything is left, and a group nobody of which was ever at risk.
 ENDINGS = {
     "early": [(0, 2, 1, "moved", 2), (0, 1, 0, None, 1), (3, 6, 1, "lapsed", 1), (3, 8, 0, None, 2)],
     "almost": [(0, 1, 1, "moved", 1000), (0, 2, 1, "lapsed", 1), (0, 3, 1, "moved", 500), (0, 4, 0, None, 1)],
+    "unseen": [(4, 4, 1, "moved", 1)],
 }
 # Very many spells, of which very few end: what 32 bits, or a series cut short, cannot hold.
 CROWD = {

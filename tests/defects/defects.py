@@ -76,7 +76,7 @@ DEFECTS = [
         ),
         (
             "events just beyond the horizon are counted at the horizon",
-            "'least(duration, ' ~ (horizon + 1) ~ ')'",
+            "'least(duration, ' ~ (horizon + 2) ~ ')'",
             "'least(duration, ' ~ horizon ~ ')'",
             "curve_log",
         ),
@@ -111,7 +111,7 @@ DEFECTS = [
             "a group that was never at risk is lost",
             "    where entry > 0\n",
             "    where entry > 0 and entry < duration\n",
-            "curve",
+            "curve_after_end",
         ),
         (
             "weights are dropped",
