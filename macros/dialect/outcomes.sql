@@ -2,7 +2,7 @@
     The spells, summed over those alike: the CTEs that end with `outcomes`, the only ones to read the spells. It has the columns `names`
     of the expressions `keys`, left_at (null for a spell that was never at risk), entered_at (null unless it entered late), events and spells
     (both are weights). A spell is counted in a row with its left_at and its entered_at, or in one with each.
-    longest and latest are duration and entry, or expressions that cut them short.
+    longest and latest are duration and entry, or expressions that cut them short but keep apart those that differ.
 #}
 
 {% macro _outcomes(spells, keys, names, longest, latest) %}
@@ -11,17 +11,24 @@
 
 
 {% macro default___outcomes(spells, keys, names, longest, latest) -%}
-{%- set left_at = 'case when entry < duration or entry = 0 then ' ~ longest ~ ' end' -%}
-{%- set entered_at = 'case when entry < duration and entry > 0 then ' ~ latest ~ ' end' -%}
-outcomes as (
+pairs as (
     select
         {% for name in names %}{{ keys[loop.index0] }} as {{ name }}, {% endfor -%}
-        {{ left_at }} as left_at,
-        {{ entered_at }} as entered_at,
+        {{ latest }} as entry,
+        {{ longest }} as duration,
         sum(case when event = 1 then {{ spellcurve._double('weight') }} else 0 end) as events,
         sum({{ spellcurve._double('weight') }}) as spells
     from {{ spells }}
-    group by {{ spellcurve._each_then_comma(keys) }}{{ left_at }}, {{ entered_at }}
+    group by {{ spellcurve._each_then_comma(keys) }}{{ latest }}, {{ longest }}
+),
+
+outcomes as (
+    select
+        {{ spellcurve._each_then_comma(names) -}}
+        case when entry < duration or entry = 0 then duration end as left_at,
+        case when entry < duration and entry > 0 then entry end as entered_at,
+        events, spells
+    from pairs
 )
 {%- endmacro %}
 

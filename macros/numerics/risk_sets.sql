@@ -59,10 +59,12 @@ risk_sets as (
         {%- do keys.append(own_cause) -%}
         {%- do names.append('own_cause') -%}
     {%- endif -%}
-    {#- beyond the horizon it only matters that the spell was still there, and entered before it left -#}
     {%- set longest, latest = 'duration', 'entry' -%}
     {%- if horizon is not none -%}
-        {%- set longest, latest = 'least(duration, ' ~ (horizon + 2) ~ ')', 'least(entry, ' ~ (horizon + 1) ~ ')' -%}
+        {%- set latest = 'least(entry, ' ~ (horizon + 1) ~ ')' -%}
+        {#- beyond the horizon only two things matter: that the spell was still there, and whether it was ever at risk -#}
+        {%- set longest = 'case when duration <= ' ~ horizon ~ ' then duration when entry < duration then ' ~ (horizon + 2)
+            ~ ' else ' ~ (horizon + 1) ~ ' end' -%}
     {%- endif -%}
 {{ spellcurve._outcomes(spells, keys, names, longest, latest) }},
 

@@ -76,8 +76,8 @@ DEFECTS = [
         ),
         (
             "events just beyond the horizon are counted at the horizon",
-            "'least(duration, ' ~ (horizon + 2) ~ ')'",
-            "'least(duration, ' ~ horizon ~ ')'",
+            "case when duration <= ' ~ horizon ~ ' then duration when entry",
+            "case when duration <= ' ~ (horizon + 1) ~ ' then least(duration, ' ~ horizon ~ ') when entry",
             "curve_log",
         ),
         (
