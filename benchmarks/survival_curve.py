@@ -298,7 +298,7 @@ def parse(arguments: list[str] | None = None) -> argparse.Namespace:
     option = parser.add_argument
     option("--spells", type=int, default=10_000_000, help="how many spells (default: ten million)")
     option("--grid-spells", type=int, default=1_000_000, help="how many spells the day grid is given")
-    option("--rounds", type=int, default=51, help="rounds of the fast ways; slow ways take three")
+    option("--rounds", type=int, default=201, help="rounds of the fast ways; slow ways take three")
     option("--fast-only", action="store_true", help="leave out lifelines and the day grid")
     option("--options", default="by=['plan']", help="arguments of survival_curve after the spells")
     option("--output", type=Path, default=RESULTS, help="the page to write")
