@@ -96,11 +96,7 @@ hazards as (
 hazard_steps as (
     select
         {{ each }}duration, group_number, group_count, events, other_events, at_risk,
-        case
-            when takes_all = 1 then {{ spellcurve._log_of_nothing_left() }}
-            when ended > 0 then {{ spellcurve._log_of_share_left('ended', 'at_risk', 'thin_share') }}
-            else 0
-        end as log_step
+        {{ spellcurve._log_step('ended', 'at_risk') }} as log_step
     from hazards
 ),
 

@@ -149,11 +149,7 @@ hazards as (
 steps_of_table as (
     select
         {{ each_group }}band, entering, events, censored, exposed, hazard_share,
-        case
-            when takes_all = 1 then {{ spellcurve._log_of_nothing_left() }}
-            when events > 0 then {{ spellcurve._log_of_share_left('events', 'exposed', 'thin_share') }}
-            else 0
-        end as log_step,
+        {{ spellcurve._log_step('events', 'exposed') }} as log_step,
         case when events > 0 and takes_all = 0 then hazard_share / (exposed - events) else 0 end as greenwood_step
     from hazards
 ),

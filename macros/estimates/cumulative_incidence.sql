@@ -70,11 +70,7 @@ steps_of_curve as (
         {{ row_key }}, own_hazard, other_hazard,
         case when at_risk > 0 then 1 / at_risk else 0 end as one_of_them,
         case when takes_all = 0 and ended > 0 then 1 / (at_risk - ended) else 0 end as one_of_those_left,
-        case
-            when takes_all = 1 then {{ spellcurve._log_of_nothing_left() }}
-            when ended > 0 then {{ spellcurve._log_of_share_left('ended', 'at_risk', 'thin_share') }}
-            else 0
-        end as log_step,
+        {{ spellcurve._log_step('ended', 'at_risk') }} as log_step,
         case when ended > 0 and takes_all = 0 then hazard / (at_risk - ended) else 0 end as greenwood_step
     from hazards
 ),

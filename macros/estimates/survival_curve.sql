@@ -71,11 +71,7 @@ hazards as (
 steps_of_curve as (
     select
         *,
-        case
-            when takes_all = 1 then {{ spellcurve._log_of_nothing_left() }}
-            when events > 0 then {{ spellcurve._log_of_share_left('events', 'at_risk', 'thin_share') }}
-            else 0
-        end as log_step,
+        {{ spellcurve._log_step('events', 'at_risk') }} as log_step,
         case when events > 0 and takes_all = 0 then hazard / (at_risk - events) else 0 end as greenwood_step,
         case when events > 0 then hazard / at_risk else 0 end as hazard_variance_step
     from hazards

@@ -35,6 +35,16 @@
 {% endmacro %}
 
 
+{# The logarithm that a step adds, from the columns takes_all (1 where it takes everyone) and thin_share (`z` of _log_of_share_left). #}
+{% macro _log_step(events, at_risk) -%}
+case
+            when takes_all = 1 then {{ spellcurve._log_of_nothing_left() }}
+            when {{ events }} > 0 then {{ spellcurve._log_of_share_left(events, at_risk, 'thin_share') }}
+            else 0
+        end
+{%- endmacro %}
+
+
 {% macro _is_nothing_left(log_survival) %}
     {{ return(log_survival ~ ' < -1e50') }}
 {% endmacro %}

@@ -50,15 +50,10 @@ risk_sets as (
 #}
 {% macro _turns(spells, by, horizon, own_cause=none) %}
     {%- set groups = spellcurve._aliases(by, 'group_') -%}
-    {%- set keys, names = [], [] -%}
-    {%- for name in by -%}
-        {%- do keys.append(spellcurve._column(name)) -%}
-        {%- do names.append(groups[loop.index0]) -%}
-    {%- endfor -%}
-    {%- if own_cause is not none -%}
-        {%- do keys.append(own_cause) -%}
-        {%- do names.append('own_cause') -%}
-    {%- endif -%}
+    {%- set names = groups + ([] if own_cause is none else ['own_cause']) -%}
+    {%- set keys = [] -%}
+    {%- for name in by -%}{%- do keys.append(spellcurve._column(name)) -%}{%- endfor -%}
+    {%- if own_cause is not none -%}{%- do keys.append(own_cause) -%}{%- endif -%}
     {%- set longest, latest = 'duration', 'entry' -%}
     {%- if horizon is not none -%}
         {%- set latest = 'least(entry, ' ~ (horizon + 1) ~ ')' -%}

@@ -163,12 +163,6 @@ DEFECTS = [
             "curve",
         ),
         (
-            "a curve at 0 rises again",
-            "when takes_all = 1 then {{ spellcurve._log_of_nothing_left() }}",
-            "when takes_all = 1 then 0",
-            "curve_after_end",
-        ),
-        (
             "the step itself is left out of the running sums",
             "order by duration rows between unbounded preceding and current row' %}",
             "order by duration rows between unbounded preceding and 1 preceding' %}",
@@ -270,6 +264,12 @@ DEFECTS = [
     ),
     *_in(
         "numerics/intervals.sql",
+        (
+            "a step that takes everyone leaves survival as it was",
+            "when takes_all = 1 then {{ spellcurve._log_of_nothing_left() }}",
+            "when takes_all = 1 then 0",
+            "curve_after_end",
+        ),
         (
             "the linear interval does not grow with survival",
             "survival ~ ' * (1 + ' ~ forth ~ ')'",
