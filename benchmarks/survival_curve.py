@@ -145,7 +145,7 @@ What is compared:
 - The bare aggregation sums the weights by group, duration and event: the least that any curve of weighted
   spells must do. Counting rows is what would do if every row stood for one spell.
 - Those that entered late did so somewhere in their course, so few of them share both entry and duration.
-- Everything in SQL is timed as `create or replace table … as`.
+- Everything in SQL is timed as `create or replace table … as`; the database writes a checkpoint between the turns.
 - lifelines is timed with the fetching of its input from the database, group by group, survival and interval.
 - The day grid joins each spell to every day that it was at risk on{grid_note}.
 
@@ -246,12 +246,17 @@ def largest_difference(curve: pd.DataFrame, fits: dict[str, pd.Series]) -> float
     return worst
 
 
-def take_turns(ways: list[Way]) -> None:
-    """Round by round, let each way run once; one turn of the first comes before, unmeasured, to warm up."""
+def take_turns(ways: list[Way], tidy_up: Callable[[], object]) -> None:
+    """Round by round, let each way run once; one turn of the first comes before, unmeasured, to warm up.
+
+    Before each turn, unmeasured too, the database tidies up: it would otherwise do so now and then in the middle of
+    some turn, on account of what all the ways have written since, and more often in the turns that write more.
+    """
     ways[0].run()
     for number in range(max(way.rounds for way in ways)):
         for way in ways:
             if number < way.rounds:
+                tidy_up()
                 way.take_a_turn()
         taken = [f"{way.name} {way.seconds[-1]:.2f} s" for way in ways if number < way.rounds]
         print(f"round {number + 1}: " + ", ".join(taken), flush=True)
@@ -340,7 +345,7 @@ def main() -> None:
                 Way("lifelines on every spell", raw, spells, few),
                 Way("day grid, range join", grid, arguments.grid_spells, few),
             ]
-        take_turns(ways)
+        take_turns(ways, lambda: connection.execute("checkpoint"))
         difference = largest_difference(connection.table("curve").df(), fit_aggregated(connection))
         page = report(ways, base, difference, arguments)
     print(page)

@@ -57,18 +57,7 @@ case
     {%- endset -%}
     {%- set shown = [] -%}
     {%- for cause, label in labels or [] if label not in shown -%}{%- do shown.append(label) -%}{%- endfor -%}
-{{ spellcurve._turns(spells, by, horizon, own_cause) }},
-
-changes as (
-    select
-        {{ each_group }}duration, own_cause,
-        sum(events) as events,
-        sum(leaving) as leaving,
-        sum(entered) as entered,
-        max(is_step) as is_step
-    from turns
-    group by {{ each_group }}duration, own_cause
-),
+{{ spellcurve._changes(spells, by, horizon, own_cause) }},
 
 {% set at_duration = spellcurve._partition_by(groups + ['duration']) -%}
 {%- set from_the_end = partition ~ 'order by duration desc range between unbounded preceding and current row' -%}

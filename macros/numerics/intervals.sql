@@ -1,8 +1,12 @@
 {# Exponentials and logarithms that every warehouse accepts, and the bounds of intervals. #}
 
-{# exp(x), held away from what would be too large or too small to keep: some warehouses raise an error there. #}
-{% macro _exp(x) %}
-    {{ return('exp(greatest(-700, least(700, ' ~ x ~ ')))') }}
+{#
+    exp(x), held away from what would be too large or too small to keep: some warehouses raise an error there.
+    sign: 1 where x is never negative, -1 where it is never positive, so that one side suffices.
+#}
+{% macro _exp(x, sign=0) %}
+    {%- set not_too_large = x if sign < 0 else 'least(700, ' ~ x ~ ')' -%}
+    {{ return('exp(' ~ (not_too_large if sign > 0 else 'greatest(-700, ' ~ not_too_large ~ ')') ~ ')') }}
 {% endmacro %}
 
 
@@ -52,7 +56,7 @@ case
 
 {# Survival from the sum of its logarithms: exactly 0 once a step has taken everyone. #}
 {% macro _survival_of(log_survival) %}
-    {{ return('case when ' ~ spellcurve._is_nothing_left(log_survival) ~ ' then 0 else ' ~ spellcurve._exp(log_survival) ~ ' end') }}
+    {{ return('case when ' ~ spellcurve._is_nothing_left(log_survival) ~ ' then 0 else ' ~ spellcurve._exp(log_survival, -1) ~ ' end') }}
 {% endmacro %}
 
 
@@ -70,15 +74,15 @@ case
     {%- set forth = spellcurve._double_literal(side * z) ~ ' * ' ~ relative_error -%}
     {%- set back = spellcurve._double_literal(0 - side * z) ~ ' * ' ~ relative_error -%}
     {%- if interval_scale == 'linear' -%}
-        {%- set bound = survival ~ ' * (1 + ' ~ forth ~ ')' -%}
+        {%- set bound = 'least(1, greatest(0, ' ~ survival ~ ' * (1 + ' ~ forth ~ ')))' -%}
     {%- elif interval_scale == 'log' -%}
-        {%- set bound = survival ~ ' * ' ~ spellcurve._exp(forth) -%}
+        {%- set bound = 'least(1, ' ~ survival ~ ' * ' ~ spellcurve._exp(forth, side) ~ ')' -%}
     {%- elif interval_scale == 'log-log' -%}
         {#- the larger bound has the smaller cumulative hazard -#}
-        {%- set factor = spellcurve._exp(back ~ ' / (0 - ' ~ log_survival ~ ')') -%}
-        {%- set bound = spellcurve._exp(log_survival ~ ' * ' ~ factor) -%}
+        {%- set factor = spellcurve._exp(back ~ ' / (0 - ' ~ log_survival ~ ')', 0 - side) -%}
+        {%- set bound = spellcurve._exp(log_survival ~ ' * ' ~ factor, -1) -%}
     {%- elif interval_scale == 'logit' -%}
-        {%- set odds_factor = spellcurve._exp(back ~ ' / (1 - ' ~ survival ~ ')') -%}
+        {%- set odds_factor = spellcurve._exp(back ~ ' / (1 - ' ~ survival ~ ')', 0 - side) -%}
         {%- set bound = survival ~ ' / (' ~ survival ~ ' + (1 - ' ~ survival ~ ') * ' ~ odds_factor ~ ')' -%}
     {%- else -%}
         {%- set angle = 'asin(sqrt(' ~ survival ~ ')) + ' ~ forth ~ ' * sqrt(' ~ survival ~ ' / (1 - ' ~ survival ~ ')) / 2' -%}
@@ -86,5 +90,5 @@ case
         {%- set kept = 'least(' ~ half_pi ~ ', greatest(0, ' ~ angle ~ '))' -%}
         {%- set bound = 'sin(' ~ kept ~ ') * sin(' ~ kept ~ ')' -%}
     {%- endif -%}
-    {{ return('least(1, greatest(0, ' ~ bound ~ '))') }}
+    {{ return(bound) }}
 {% endmacro %}
