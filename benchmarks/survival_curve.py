@@ -1,8 +1,8 @@
 """What survival_curve costs beside the least that any answer must cost: one aggregation of the spells.
 
 Every figure is a ratio of two times from one run on one machine. The ways of getting the curve take turns,
-round by round, so that whatever else the machine does falls on all of them alike; a ratio is the median over
-the rounds of the ratio within a round.
+round by round in an order drawn anew, so that whatever else the machine does falls on all of them alike; a
+ratio is the median over the rounds of the ratio within a round.
 """
 
 from __future__ import annotations
@@ -19,6 +19,7 @@ from dataclasses import dataclass, field
 from functools import partial
 from importlib.metadata import version
 from pathlib import Path
+from random import Random
 from statistics import median
 
 import duckdb
@@ -127,7 +128,8 @@ PAGE = """\
 Written by `make bench`: every figure below comes from one run of benchmarks/survival_curve.py.
 
 {spells:,} spells in {groups} groups, durations of 0 to {longest} days, 40 % ended by the event. The ways
-take turns, and a ratio is the median over the rounds of the ratio within a round.
+take turns, in an order drawn anew for each round, and a ratio is the median over the rounds of the ratio
+within a round.
 
 | way | spells | rounds | seconds | processor seconds | ratio of seconds | ratio of processor seconds |
 | --- | ---: | ---: | ---: | ---: | ---: | ---: |
@@ -145,7 +147,8 @@ What is compared:
 - The bare aggregation sums the weights by group, duration and event: the least that any curve of weighted
   spells must do. Counting rows is what would do if every row stood for one spell.
 - Those that entered late did so somewhere in their course, so few of them share both entry and duration.
-- Everything in SQL is timed as `create or replace table … as`; the database writes a checkpoint between the turns.
+- Everything in SQL is timed as `create or replace table … as`.
+- Between the turns the database writes a checkpoint, which would otherwise fall into some of them.
 - lifelines is timed with the fetching of its input from the database, group by group, survival and interval.
 - The day grid joins each spell to every day that it was at risk on{grid_note}.
 
@@ -247,18 +250,20 @@ def largest_difference(curve: pd.DataFrame, fits: dict[str, pd.Series]) -> float
 
 
 def take_turns(ways: list[Way], tidy_up: Callable[[], object]) -> None:
-    """Round by round, let each way run once; one turn of the first comes before, unmeasured, to warm up.
+    """Round by round, let each way run once; a turn of the first comes before, unmeasured, to warm up.
 
-    Before each turn, unmeasured too, the database tidies up: it would otherwise do so now and then in the middle of
-    some turn, on account of what all the ways have written since, and more often in the turns that write more.
+    The order of a round is drawn, since what ran before leaves the caches as it does. Before each turn,
+    unmeasured too, the database tidies up: otherwise it would do so now and then in the middle of some turn,
+    on account of what all the ways have written since, and more often in the turns that write more.
     """
     ways[0].run()
+    order = Random(1)
     for number in range(max(way.rounds for way in ways)):
-        for way in ways:
-            if number < way.rounds:
-                tidy_up()
-                way.take_a_turn()
-        taken = [f"{way.name} {way.seconds[-1]:.2f} s" for way in ways if number < way.rounds]
+        running = [way for way in ways if number < way.rounds]
+        for way in order.sample(running, len(running)):
+            tidy_up()
+            way.take_a_turn()
+        taken = [f"{way.name} {way.seconds[-1]:.2f} s" for way in running]
         print(f"round {number + 1}: " + ", ".join(taken), flush=True)
 
 
