@@ -113,6 +113,22 @@ def test_one_left_at_the_end_of_a_billion(engine):
     assert engine.run(call([]))[-1]["survival"] > 0
 
 
+@pytest.mark.parametrize("options", ["", ", horizon=5"])
+def test_spells_without_an_entry_or_a_duration_only_make_their_group_known(engine, options):
+    rows = [
+        {"plan": "a", "entry": 0, "duration": None, "event": 1, "weight": 2},
+        {"plan": "b", "entry": None, "duration": 3, "event": 1, "weight": 2},
+        {"plan": "c", "entry": 1, "duration": None, "event": 0, "weight": 2},
+    ]
+    engine.load("spells", {"plan": "text", **WHOLE}, rows)
+    found = engine.run(f"survival_curve('spells', by='plan'{options})")
+    assert sorted((row["plan"], row["duration"], row["at_risk"]) for row in found) == [
+        ("a", 0, 0),
+        ("b", 0, 0),
+        ("c", 0, 0),
+    ]
+
+
 def test_the_groups_are_first_and_keep_their_names(engine):
     engine.load(
         "spells",

@@ -2,7 +2,7 @@
     Who leaves the risk set at a duration and who enters it late after it: the CTEs that end with `changes`, the first of which is the only
     one to read the spells (group_1, …, duration, own_cause if it is given as an expression, events, leaving, entered, is_step; one row for
     each duration, and cause). Every group has a row at 0, and one at the horizon if it comes so far. A spell whose entry equals its duration,
-    and is not 0, was under observation at no duration: it only makes its group known.
+    and is not 0, was under observation at no duration: it only makes its group known. So does one without entry or duration, which is unsound.
 #}
 {% macro _changes(spells, by, horizon, own_cause=none) %}
     {%- set groups = spellcurve._aliases(by, 'group_') -%}
@@ -15,7 +15,7 @@
         {%- set latest = 'least(entry, ' ~ (horizon + 1) ~ ')' -%}
         {#- beyond the horizon only two things matter: that the spell was still there, and whether it was ever at risk -#}
         {%- set longest = 'case when duration <= ' ~ horizon ~ ' then duration when entry < duration then ' ~ (horizon + 2)
-            ~ ' else ' ~ (horizon + 1) ~ ' end' -%}
+            ~ ' when duration is not null then ' ~ (horizon + 1) ~ ' end' -%}
     {%- endif -%}
     {{ return(adapter.dispatch('_changes_summed', 'spellcurve')(spells, keys, names, groups, longest, latest, horizon)) }}
 {% endmacro %}
@@ -114,15 +114,16 @@ entries as (
         {{ each_group }}case when entry < duration then {{ latest }} else 0 end as duration,
         case when entry < duration then {{ spellcurve._double('weight') }} else 0 end as entered
     from watched
-    where entry > 0
-    {%- for known, condition in [(0, none), (horizon, 'duration > ' ~ horizon)] if known is not none %}
+    where entry > 0 or entry is null or duration is null
     union all
-    select {{ each_group }}{{ known }} as duration, 0 as entered
+    select {{ each_group }}0 as duration, 0 as entered
     from leaving
-    {%- if condition is not none %}
-    where {{ condition }}
+    {%- if horizon is not none %}
+    union all
+    select {{ each_group }}{{ horizon }} as duration, 0 as entered
+    from leaving
+    where duration > {{ horizon }}
     {%- endif %}
-    {%- endfor %}
 ),
 
 entering as (

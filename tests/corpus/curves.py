@@ -61,6 +61,37 @@ CASES = [
         [f"survival_curve('parts', {BY}, weights='fractional')"],
     ),
     Case(
+        "spells without an entry or a duration",
+        {
+            "incomplete": Table(
+                {
+                    "plan": "text",
+                    "entry": "bigint",
+                    "duration": "bigint",
+                    "event": "bigint",
+                    "weight": "bigint",
+                },
+                [
+                    dict(zip(("plan", "entry", "duration", "event", "weight"), row, strict=True))
+                    for row in [
+                        ("both", 0, None, 1, 2),
+                        ("both", None, 4, 1, 3),
+                        ("both", 1, None, 0, 5),
+                        ("some", 0, None, 1, 2),
+                        ("some", None, 9, 0, 1),
+                        ("some", 0, 3, 1, 1),
+                        ("some", 2, 9, 0, 4),
+                    ]
+                ],
+            )
+        },
+        [
+            "survival_curve('incomplete', by='plan')",
+            "survival_curve('incomplete', by='plan', horizon=5)",
+            "survival_curve('incomplete', by='plan', horizon=1)",
+        ],
+    ),
+    Case(
         "no spells",
         {"nothing": Table(COLUMNS, [])},
         ["survival_curve('nothing')", f"survival_curve('nothing', {BY})"],

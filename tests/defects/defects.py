@@ -96,8 +96,8 @@ DEFECTS = [
         ),
         (
             "a group that was never at risk is lost",
-            "    where entry > 0\n",
-            "    where entry > 0 and entry < duration\n",
+            "    where entry > 0 or entry is null",
+            "    where entry < duration and entry > 0 or entry is null",
             "curve_after_end",
         ),
         (
@@ -144,8 +144,8 @@ DEFECTS = [
         ),
         (
             "no curve has its row at 0",
-            "for known, condition in [(0, none), (horizon,",
-            "for known, condition in [(none, none), (horizon,",
+            "0 as duration, 0 as entered\n    from leaving\n",
+            "0 as duration, 0 as entered\n    from leaving\n    where duration = 0\n",
             "curve",
         ),
         (
