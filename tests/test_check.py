@@ -5,13 +5,15 @@ from __future__ import annotations
 import json
 import re
 import shutil
+from dataclasses import replace
+from datetime import datetime
 from pathlib import Path
 from xml.etree import ElementTree as xml
 
 import duckdb
 import pytest
 import spellcurve
-from corpus import Case, all_cases
+from corpus import Case, Table, all_cases
 from harness import KeptDuckDB
 from proof import write_project
 from spellcurve.check import AGREES, DISAGREES, STALE, UNCHECKED, CheckedCall, CheckError, check_project
@@ -19,6 +21,9 @@ from spellcurve.cli import app
 from spellcurve.project import Project, find_calls
 from test_consumer import PACKAGE, Consumer, copied_to
 from typer.testing import CliRunner
+
+UNSOUND = "What the model reads is not sound"
+
 
 # The corpus
 
@@ -36,7 +41,7 @@ def one_call_of_each_macro() -> list[Case]:
                 calls.append(call)
         made = {name: call for name, call in case.made.items() if any(f"'{name}'" in one for one in calls)}
         if calls:
-            cases.append(Case(case.name, case.tables, calls, made))
+            cases.append(replace(case, calls=calls, made=made))
     return cases
 
 
@@ -46,7 +51,13 @@ def checked(engine, folder: Path, cases: list[Case]) -> list[CheckedCall]:
     assert outcome.success, "\n".join(said[-5:])
     found = check_project(proof.folder, profiles_dir=engine.scratch, target=engine.name)
     assert {call.model for call in found.calls} == set(proof.cases)
-    return list(found.calls)
+    wrong = [
+        f"{(folder / 'project' / call.path).read_text()}: {call.verdict} {call.note}"
+        for call in found.calls
+        if not proof.cases[call.model].is_sound and not (call.verdict == UNCHECKED and UNSOUND in call.note)
+    ]
+    assert not wrong, "\n".join(wrong)
+    return [call for call in found.calls if proof.cases[call.model].is_sound]
 
 
 def assert_agreement(calls: list[CheckedCall]) -> None:
@@ -64,6 +75,81 @@ def test_every_call_of_the_corpus_is_recomputed_and_agrees(tmp_path_factory, tmp
 
 def test_every_macro_is_recomputed_and_agrees_on_the_other_engines(other_engine, tmp_path):
     assert_agreement(checked(other_engine, tmp_path, one_call_of_each_macro()))
+
+
+UNSOUND_SPELLS = {
+    "nameless_entry": {"entry": None},
+    "endless": {"duration": None},
+    "undecided": {"event": None},
+    "weightless": {"weight": None},
+    "backward": {"entry": 5},
+    "doubled": {"event": 2},
+    "negative": {"weight": -9},
+    "partial": {"duration": 3.5},
+}
+READING_SPELLS = [
+    "survival_curve('{0}', by='plan')",
+    "survival_curve('{0}', horizon=2)",
+    "hazard_by_band('{0}', by='plan', width=2)",
+    "cohort_readout('{0}', 'plan', [2])",
+    "actuarial_table('{0}', by='plan', width=2)",
+    "cumulative_incidence('{0}', by='plan')",
+    "mean_cumulative_count('{0}', 'happenings', 'subject', 'at', by='plan')",
+    "mean_cumulative_count('{0}', 'happenings', 'subject', 'age', happened_as='tenure')",
+    "mean_cumulative_count('{0}', 'happenings', 'subject', 'at', rows='faulty')",
+    "log_rank_test('{0}', 'plan')",
+    "time_to_events_needed('{0}', 1.6, intake=2)",
+    "incidence_gray_test('{0}', 'plan', 'moved')",
+]
+SPELL_COLUMNS = {
+    "subject_id": "text",
+    "started_at": "moment",
+    "last_seen_at": "moment",
+    "plan": "text",
+    "entry": "bigint",
+    "duration": "double",
+    "event": "bigint",
+    "cause": "text",
+    "weight": "double",
+}
+
+
+def test_unsound_spells_are_refused_in_one_sentence_whatever_reads_them(tmp_path_factory, tmp_path):
+    people = [("ann", "solo", 1), ("bob", "pair", 0), ("cleo", "solo", 0), ("dan", "pair", 1)]
+    spells = [
+        (who, datetime(2031, 4, 1), datetime(2031, 4, 5), plan, 0, 4, event, "moved" if event else None, 1)
+        for who, plan, event in people
+    ]
+    good = [dict(zip(SPELL_COLUMNS, row, strict=True)) for row in spells]
+    tables = {name: Table(SPELL_COLUMNS, [*good[:3], good[3] | bad]) for name, bad in UNSOUND_SPELLS.items()}
+    happenings = Table(
+        {"subject": "text", "at": "moment", "age": "bigint"},
+        [{"subject": "ann", "at": datetime(2031, 4, 2), "age": 1}],
+    )
+    calls = [
+        call.format(name)
+        for name, bad in UNSOUND_SPELLS.items()
+        for call in READING_SPELLS
+        if "event" not in bad or not call.startswith("mean_cumulative_count")  # which does not read it
+    ]
+    case = Case("unsound", tables | {"happenings": happenings}, calls, is_sound=False)
+    assert checked(KeptDuckDB(tmp_path_factory.mktemp("kept")), tmp_path, [case]) == []
+
+
+def test_a_refused_spell_is_described(consumer):
+    consumer.write(
+        "models/spells_of_nobody.sql",
+        "select 'solo' as plan, 0 as entry, cast(null as integer) as duration, 1 as event, 2 as weight",
+    )
+    consumer.write(
+        "models/curve_of_nobody.sql", "{{ spellcurve.survival_curve(ref('spells_of_nobody'), by='plan') }}"
+    )
+    consumer.build("--select", "spells_of_nobody", "curve_of_nobody")
+    found = verdicts(consumer, "curve_of_nobody")["curve_of_nobody"]
+    assert found.note == (
+        f"{UNSOUND}: a spell of entry 0, duration null, event 1, weight 2 in the group solo needs a whole "
+        "number as duration; correct it (the test spells_are_sound finds all such)."
+    )
 
 
 # The consumer repo

@@ -23,7 +23,7 @@ from spellcurve import (
     survival_curve,
     survival_curves,
 )
-from spellcurve.exact import COUNTS, ESTIMATES, FIGURES, INTERVAL_SCALES, normal_quantile
+from spellcurve.exact import COUNTS, ESTIMATES, FIGURES, INTERVAL_SCALES, as_spell, normal_quantile
 from spellcurve.independent import independent_curve, independent_curves
 from spellcurve.rebuild import (
     FAULTY_COLUMNS,
@@ -150,6 +150,31 @@ def test_small_groups_lose_their_estimates_and_on_request_their_counts():
     assert kept[2].survival == Fraction(2, 3)
     hidden = by_duration(survival_curve(spells, minimum_at_risk=2, small_counts="hide"))
     assert all(getattr(hidden[3], name) is None for name in FIGURES)
+
+
+@pytest.mark.parametrize("number", [int, float, Decimal, Fraction], ids=lambda kind: kind.__name__)
+def test_a_spell_is_read_from_any_type_of_number(number):
+    row = {"entry": number(2), "duration": number(5), "event": number(1), "weight": number(3) / 2}
+    assert as_spell(row, ("solo",), "moved") == Spell(2, 5, 1, Fraction(3, 2), "moved", ("solo",))
+
+
+@pytest.mark.parametrize(
+    ("name", "value", "kind"),
+    [
+        ("entry", None, "whole number"),
+        ("duration", 3.5, "whole number"),
+        ("duration", Decimal("NaN"), "whole number"),
+        ("event", "yes", "whole number"),
+        ("weight", float("inf"), "number"),
+        ("weight", float("nan"), "number"),
+        ("weight", None, "number"),
+    ],
+)
+def test_a_row_that_is_no_spell_is_refused_with_what_it_is(name, value, kind):
+    row = {"entry": 0, "duration": 5, "event": 1, "weight": 1} | {name: value}
+    shown = "null" if value is None else value
+    with pytest.raises(ValueError, match=rf"{name} {shown}.* in the group solo needs a {kind} as {name}"):
+        as_spell(row, ("solo",))
 
 
 def test_counts_that_are_not_whole_are_null_unless_fractions_are_asked_for():

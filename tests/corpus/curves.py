@@ -90,6 +90,7 @@ CASES = [
             "survival_curve('incomplete', by='plan', horizon=5)",
             "survival_curve('incomplete', by='plan', horizon=1)",
         ],
+        is_sound=False,
     ),
     Case(
         "no spells",

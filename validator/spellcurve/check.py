@@ -563,18 +563,11 @@ class _Checker:
                 )
             expressions.insert(0, column)
         named = [f"{text} as group_{place}" for place, text in enumerate(expressions)]
-        columns = ", ".join([*named, "entry", "duration", "event", "sum(weight) as weight"])
+        columns = ", ".join([*named, "entry", "duration", "event", exact.SUMMED_WEIGHT])
         keys = ", ".join([*expressions, "entry", "duration", "event"])
         rows = self.query(call, provenance.spells or "", f"select {columns} from {{source}} group by {keys}")
         return exact.group_spells(
-            Spell(
-                row["entry"],
-                row["duration"],
-                row["event"],
-                _exact(row["weight"]) or 0,
-                None,
-                tuple(row[f"group_{place}"] for place in range(len(expressions))),
-            )
+            exact.as_spell(row, tuple(row[f"group_{place}"] for place in range(len(expressions))))
             for row in rows
         )
 

@@ -20,7 +20,7 @@ from scipy.stats import chi2
 
 from spellcurve import exact_comparisons, exact_incidence
 from spellcurve.compare_readouts import Table
-from spellcurve.exact import Spell, is_whole, normal_quantile, to_decimal
+from spellcurve.exact import SUMMED_WEIGHT, Spell, as_spell, is_whole, normal_quantile, to_decimal
 from spellcurve.exact_incidence import History, StateCourse, Unit
 from spellcurve.provenance import Provenance
 from spellcurve.rebuild import completed_units, read_moment, read_number
@@ -142,15 +142,8 @@ class Recomputed:
         own = ("entry", "duration", "event", "cause") if causes else ("entry", "duration", "event")
         expressions = self._groups(columns) | {name: name for name in own}
         return [
-            Spell(
-                int(row["entry"]),
-                int(row["duration"]),
-                int(row["event"]),
-                Fraction(row["weight"]),
-                row.get("cause"),
-                _group_of(row, columns),
-            )
-            for row in self._pulled(relation, expressions, "sum(weight) as weight")
+            as_spell(row, _group_of(row, columns), row.get("cause"))
+            for row in self._pulled(relation, expressions, SUMMED_WEIGHT)
         ]
 
     def _rows_of(self, relation: str, macro: str, by: Sequence[str], figures: Sequence[str]) -> list[Row]:
@@ -342,11 +335,17 @@ class Recomputed:
         )
         of_subject: dict[Any, list[Row]] = {}
         for spell in spells:
-            spell["tenures"] = []
+            sound = as_spell(spell | {"event": 0}, _group_of(spell, provenance.by))
+            spell |= {"entry": sound.entry, "duration": sound.duration, "weight": sound.weight, "tenures": []}
             if by_moment:
                 spell["started"], spell["ended"] = map(
                     read_moment, (spell["started_at"], spell["last_seen_at"])
                 )
+                if spell["started"] is None or spell["ended"] is None:
+                    raise ValueError(
+                        f"the spell {spell['subject_id']} has no started_at or no last_seen_at, so no event "
+                        "can be placed by its moment; give both, or the events by tenure."
+                    )
                 spell["order"] = (spell["started"], spell["ended"], spell["duration"])
             else:
                 spell["order"] = (spell["entry"], spell["duration"])
@@ -373,10 +372,10 @@ class Recomputed:
         units: dict[tuple[Any, ...], dict[Any, tuple[list[tuple[int, int]], list[int], Any]]] = {}
         for place, spell in enumerate(spells):
             subject = (spell["subject_id"], None if spell["subject_id"] is not None else place)
-            weight = Fraction(spell["weight"])
+            weight = spell["weight"]
             of_group = units.setdefault(_group_of(spell, by), {})
             unit = of_group.setdefault((subject, weight), ([], [], weight))
-            unit[0].append((int(spell["entry"]), int(spell["duration"])))
+            unit[0].append((spell["entry"], spell["duration"]))
             unit[1].extend(spell["tenures"])
         z = normal_quantile(options["confidence"])
         rows = []

@@ -114,6 +114,43 @@ FIGURES = (*COUNTS, *ESTIMATES)
 _EXACT_SUMS = ("greenwood_sum", "cumulative_hazard_variance")
 
 
+_NUMBERS = ("entry", "duration", "event", "weight")
+#: An aggregate in SQL: the weight of spells together, but one that is null or not above 0 if there is such.
+SUMMED_WEIGHT = (
+    "case when count(weight) = count(*) and min(weight) > 0 then sum(weight) "
+    "when count(weight) = count(*) then min(weight) end as weight"
+)
+
+
+def as_spell(row: Mapping[str, Any], group: tuple[Any, ...] = (), cause: str | None = None) -> Spell:
+    """Make a spell of a row as a warehouse gives it, whatever types its numbers have.
+
+    Args:
+        row: ``entry``, ``duration``, ``event`` and ``weight`` of the spell.
+        group: values of the grouping columns.
+        cause: which kind of event it was.
+
+    Raises:
+        ValueError: the row is no sound spell.
+    """
+    numbers: dict[str, Any] = {}
+    for name in _NUMBERS:
+        try:
+            number = Fraction(row[name])
+        except (TypeError, ValueError, OverflowError):  # null, not a number, infinite
+            number = None
+        if number is None or (number.denominator > 1 and name != "weight"):
+            shown = ", ".join(f"{one} {'null' if row[one] is None else row[one]}" for one in _NUMBERS)
+            where = f" in the group {', '.join(map(str, group))}" if group else ""
+            kind = "number" if name == "weight" else "whole number"
+            raise ValueError(
+                f"a spell of {shown}{where} needs a {kind} as {name}; "
+                "correct it (the test spells_are_sound finds all such)."
+            )
+        numbers[name] = int(number) if number.denominator == 1 else number
+    return Spell(**numbers, cause=cause, group=group)
+
+
 def group_spells(spells: Iterable[Spell]) -> dict[tuple[Any, ...], list[Spell]]:
     """Sort spells into their groups, in the order in which the groups first appear."""
     groups: dict[tuple[Any, ...], list[Spell]] = {}
