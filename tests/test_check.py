@@ -152,6 +152,23 @@ def test_a_refused_spell_is_described(consumer):
     )
 
 
+def test_a_hand_made_table_without_a_duration_is_refused(consumer):
+    curve = "1 as at_risk, 0 as events, 0 as censored, 0.0 as hazard, 1.0 as survival, null as std_error"
+    incidence = "'moved' as cause, 1 as at_risk, 0 as events, 0.0 as incidence, 0.0 as std_error"
+    bounds = "null as {0}_lower, null as {0}_upper"
+    for name, columns, macro in [
+        ("survival", f"{curve}, {bounds.format('survival')}", "survival_at"),
+        ("incidence", f"{incidence}, {bounds.format('incidence')}", "incidence_at"),
+    ]:
+        rows = " union all ".join(f"select {duration} as duration, {columns}" for duration in (0, "null"))
+        consumer.write(f"models/own_{name}.sql", rows)
+        consumer.write(f"models/{name}_read.sql", f"{{{{ spellcurve.{macro}(ref('own_{name}'), [3]) }}}}")
+    consumer.build("--select", "own_survival+", "own_incidence+")
+    found = verdicts(consumer, "survival_read", "incidence_read")
+    for call in found.values():
+        assert call.verdict == UNCHECKED and "has a row without a duration" in call.note, call
+
+
 # The consumer repo
 
 

@@ -387,6 +387,7 @@ class _Checker:
             return _by(curves, bare(source.provenance.by), by), ""
         published: dict[Group, list[CurveRow]] = {}
         rows = self.query(call, relation, "select * from {source}")
+        exact.check_durations(relation, rows)
         for row in sorted(rows, key=lambda row: int(row["duration"])):
             group = tuple(row[name] for name in by)
             figures = {name: _as_fraction(row.get(name)) for name in FIGURES}

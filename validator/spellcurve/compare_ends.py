@@ -20,7 +20,15 @@ from scipy.stats import chi2
 
 from spellcurve import exact_comparisons, exact_incidence
 from spellcurve.compare_readouts import Table
-from spellcurve.exact import SUMMED_WEIGHT, Spell, as_spell, is_whole, normal_quantile, to_decimal
+from spellcurve.exact import (
+    SUMMED_WEIGHT,
+    Spell,
+    as_spell,
+    check_durations,
+    is_whole,
+    normal_quantile,
+    to_decimal,
+)
 from spellcurve.exact_incidence import History, StateCourse, Unit
 from spellcurve.provenance import Provenance
 from spellcurve.rebuild import completed_units, read_moment, read_number
@@ -153,11 +161,13 @@ class Recomputed:
             return self.rows(made)
         keys = KEYS[macro]
         expressions = self._groups(by) | {name: name for name in (*keys, *figures)}
+        rows = self._pulled(relation, expressions)
+        check_durations(relation, rows)
         return [
             dict(zip(bare(by), _group_of(row, by), strict=True))
             | {name: row[name] for name in keys}
             | {name: _exact(row[name]) for name in figures}
-            for row in self._pulled(relation, expressions)
+            for row in rows
         ]
 
     # Several causes

@@ -151,6 +151,20 @@ def as_spell(row: Mapping[str, Any], group: tuple[Any, ...] = (), cause: str | N
     return Spell(**numbers, cause=cause, group=group)
 
 
+def check_durations(relation: str, rows: Iterable[Mapping[str, Any]]) -> None:
+    """Make sure that each row of a table which a read-out reads has a duration.
+
+    Raises:
+        ValueError: one has none.
+    """
+    for row in rows:
+        if row["duration"] is None:
+            known = ", ".join(f"{name} {value}" for name, value in row.items() if value is not None)
+            raise ValueError(
+                f"{relation} has a row without a duration ({known}); give it one or leave it out."
+            )
+
+
 def group_spells(spells: Iterable[Spell]) -> dict[tuple[Any, ...], list[Spell]]:
     """Sort spells into their groups, in the order in which the groups first appear."""
     groups: dict[tuple[Any, ...], list[Spell]] = {}
