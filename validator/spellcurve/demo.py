@@ -17,7 +17,7 @@ from dbt.cli.main import dbtRunner
 
 from spellcurve import compare_ends, compare_groups, compare_readouts, generate
 from spellcurve.compare import Comparison, compare_curves
-from spellcurve.exact import CURVE_OPTIONS, CurveRow, Spell, group_spells, survival_curves
+from spellcurve.exact import CURVE_OPTIONS, CurveRow, Spell, as_spell, group_spells, survival_curves
 from spellcurve.independent import independent_curves
 from spellcurve.package import find_package
 from spellcurve.provenance import Provenance, first_provenance
@@ -579,10 +579,7 @@ def _spells(
         )
     columns = ", ".join([*expressions, "entry", "duration", "event"])
     rows = _rows(connection, f"select {columns}, sum(weight) as weight from {provenance.spells} group by all")
-    return group_spells(
-        Spell(row["entry"], row["duration"], row["event"], int(row["weight"]), None, _group(row, by))
-        for row in rows
-    )
+    return group_spells(as_spell(row, _group(row, by)) for row in rows)
 
 
 def _check_curve(

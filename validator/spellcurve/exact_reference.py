@@ -15,7 +15,15 @@ from spellcurve.compare import TOLERANCE, Comparison, compare_curves
 from spellcurve.compare_readouts import Table
 from spellcurve.compare_readouts import compare_readouts as compare_tables
 from spellcurve.compare_spells import compare_rows
-from spellcurve.exact import CURVE_OPTIONS, CurveRow, Spell, group_spells, normal_quantile, survival_curves
+from spellcurve.exact import (
+    CURVE_OPTIONS,
+    CurveRow,
+    Spell,
+    as_spell,
+    group_spells,
+    normal_quantile,
+    survival_curves,
+)
 from spellcurve.package import read_reference
 from spellcurve.provenance import Provenance
 
@@ -101,14 +109,7 @@ class ExactReference:
     def _spells(self, relation: str, groups: Iterable[str]) -> dict[Group, list[Spell]]:
         names = tuple(groups)
         return group_spells(
-            Spell(
-                row["entry"],
-                row["duration"],
-                row["event"],
-                Fraction(row["weight"]),
-                row["cause"],
-                tuple(row[name] for name in names),
-            )
+            as_spell(row, tuple(row[name] for name in names), row["cause"])
             for row in self._spell_rows(_name(relation))
         )
 
