@@ -78,7 +78,7 @@ def test_every_macro_is_recomputed_and_agrees_on_the_other_engines(other_engine,
 
 
 UNSOUND_SPELLS = {
-    "nameless_entry": {"entry": None},
+    "entryless": {"entry": None},
     "endless": {"duration": None},
     "undecided": {"event": None},
     "weightless": {"weight": None},
@@ -148,7 +148,7 @@ def test_a_refused_spell_is_described(consumer):
     found = verdicts(consumer, "curve_of_nobody")["curve_of_nobody"]
     assert found.note == (
         f"{UNSOUND}: a spell of entry 0, duration null, event 1, weight 2 in the group solo needs a whole "
-        "number as duration; correct it (the test spells_are_sound finds all such)."
+        "number as duration; correct it (the test spells_are_sound lists such spells)."
     )
 
 

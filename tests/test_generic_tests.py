@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from datetime import date
 from typing import Any
 
@@ -151,6 +152,24 @@ def test_each_kind_of_unsound_spell_is_found(rendered, changes, problem):
     assert {name: found[0][name] for name in SPELL_TYPES if name != "source_rows"} == {
         name: value for name, value in bad.items() if name != "source_rows"
     }
+
+
+@pytest.mark.parametrize(
+    ("changes", "problem"),
+    [
+        ({"entry": 0.5}, "entry or duration is not a whole number"),
+        ({"duration": 3.5}, "entry or duration is not a whole number"),
+        ({"weight": math.inf}, "weight is infinite or not a number"),
+        ({"weight": math.nan}, "weight is infinite or not a number"),
+        ({"weight": 0.5}, None),
+    ],
+    ids=str,
+)
+def test_spells_in_double_precision_are_whole_and_finite(rendered, changes, problem):
+    types = SPELL_TYPES | dict.fromkeys(("entry", "duration", "weight"), "double")
+    rendered.load("spells", types, [*GOOD_SPELLS, spell("cleo", 1, 2, 4) | changes])
+    found = rendered.run(SOUND)
+    assert [(row["subject_id"], row["problem"]) for row in found] == [("cleo", problem)] * bool(problem)
 
 
 def test_a_spell_number_given_twice_is_found(rendered):

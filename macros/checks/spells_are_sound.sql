@@ -24,10 +24,12 @@ spells_with_problems as (
             when last_seen_at < started_at then 'last_seen_at is before started_at'
             when entry is null or entry < 0 then 'entry is null or negative'
             when duration is null or duration < entry then 'duration is null or below entry'
+            when floor(entry) <> entry or floor(duration) <> duration then 'entry or duration is not a whole number'
             when event is null or event not in (0, 1) then 'event is neither 0 nor 1'
             when event = 1 and cause is null then 'an event without a cause'
             when event = 0 and cause is not null then 'a cause without an event'
             when weight is null or weight <= 0 then 'weight is null or not above 0'
+            when not {{ spellcurve._double('weight') }} < {{ spellcurve._double("'1e300'") }} then 'weight is infinite or not a number'
         end as problem
     from spells_with_copies
 )

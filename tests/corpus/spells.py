@@ -93,6 +93,40 @@ def random_lengths(count: int) -> list[dict]:
     ]
 
 
+UNSOUND = {
+    "subject_id": "text",
+    "spell_number": "bigint",
+    "started_at": "date",
+    "last_seen_at": "date",
+    "entry": "double",
+    "duration": "double",
+    "event": "bigint",
+    "cause": "text",
+    "weight": "double",
+}
+
+
+def unsound_spells() -> list[dict]:
+    changes = [
+        {},
+        {"spell_number": 0},
+        {"last_seen_at": None},
+        {"entry": None},
+        {"duration": -1.5},
+        {"entry": 0.25},
+        {"duration": 4.5},
+        {"event": 2},
+        {"cause": None},
+        {"weight": None},
+        {"weight": -0.5},
+        {"weight": 2e300},
+    ]
+    row = dict(
+        zip(UNSOUND, (None, 1, date(2024, 1, 1), date(2024, 1, 5), 0.0, 4.0, 1, "moved", 0.5), strict=True)
+    )
+    return [row | {"subject_id": f"s{number}"} | change for number, change in enumerate(changes)]
+
+
 FIRST = "'began', 'began', as_of='2024-03-31', cause='kind', recorded_at='written_on', source_rows=true"
 DURATIONS = "'lengths', 'months', 'left', entry='waited', weight='stands for', carry='who'"
 CASES = [
@@ -112,6 +146,11 @@ CASES = [
             f"spells_to_first_event('origins', 'happenings', 'subject_key', {FIRST}, rows='{r}')"
             for r in ("sound", "faulty")
         ],
+    ),
+    Case(
+        "unsound spells",
+        {"doubtful": Table(UNSOUND, unsound_spells())},
+        ["test_spells_are_sound('doubtful')"],
     ),
     Case(
         "durations",

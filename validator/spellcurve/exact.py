@@ -145,7 +145,7 @@ def as_spell(row: Mapping[str, Any], group: tuple[Any, ...] = (), cause: str | N
             kind = "number" if name == "weight" else "whole number"
             raise ValueError(
                 f"a spell of {shown}{where} needs a {kind} as {name}; "
-                "correct it (the test spells_are_sound finds all such)."
+                "correct it (the test spells_are_sound lists such spells)."
             )
         numbers[name] = int(number) if number.denominator == 1 else number
     return Spell(**numbers, cause=cause, group=group)
